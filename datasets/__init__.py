@@ -1,0 +1,1 @@
+"""Material constants, reference tables and the demo scenario."""

@@ -1,0 +1,1 @@
+"""From files to answers: importers, observables, inverse step, report, command line."""

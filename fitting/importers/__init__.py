@@ -1,0 +1,1 @@
+"""Readers of bench files: input and output only, records out."""

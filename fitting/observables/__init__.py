@@ -1,0 +1,1 @@
+"""What the model predicts for a reading."""

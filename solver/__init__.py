@@ -1,0 +1,1 @@
+"""Physics only: arrays in, arrays out."""

@@ -1,0 +1,1 @@
+"""Blank files for users and page templates for reports."""
