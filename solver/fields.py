@@ -75,9 +75,7 @@ def mode_derivatives(
     return SlabDerivatives(dn, dnn, dt, dl[..., 0])
 
 
-def _derivatives(
-    layers: Layers, N: Array, wavelength_um: Array, isotropic: bool
-) -> tuple[Array, Array, Array, Array]:
+def _derivatives(layers: Layers, N: Array, wavelength_um: Array, isotropic: bool) -> tuple[Array, Array, Array, Array]:
     profile = _profile(layers, N)
     w, a, b, q = layers.w, layers.a, layers.b, N**2
     total = 2 * N * (b * profile.psi2).sum(axis=0)

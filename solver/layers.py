@@ -58,9 +58,7 @@ def check_stack(n: ArrayLike, t_um: ArrayLike, wavelength_um: ArrayLike) -> tupl
     t = np.asarray(t_um, dtype=float)
     lam = np.asarray(wavelength_um, dtype=float)
     if n_.ndim < 1 or n_.shape[-1] < 3:
-        raise ValueError(
-            f"n has shape {n_.shape}; its last axis must hold at least 3 layers, half-spaces included"
-        )
+        raise ValueError(f"n has shape {n_.shape}; its last axis must hold at least 3 layers, half-spaces included")
     if t.ndim < 1 or t.shape[-1] != n_.shape[-1] - 2:
         raise ValueError(f"t_um has shape {t.shape}; its last axis must hold {n_.shape[-1] - 2} thicknesses")
     if not (np.all(n_ > 0) and np.all(t >= 0) and np.all(lam > 0)):

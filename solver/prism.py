@@ -37,9 +37,7 @@ def coupling_angle_deg(N: ArrayLike, n_p: ArrayLike, base_angle_deg: ArrayLike) 
     """Coupling angle in degrees, NaN where the prism cannot reach N (N >= n_p, or total reflection at the face)."""
     n, index = np.asarray(n_p, dtype=float), np.asarray(N, dtype=float)
     inner, outer = _refraction(index, n, np.deg2rad(np.asarray(base_angle_deg, dtype=float)))
-    return np.asarray(
-        np.rad2deg(np.where(np.abs(outer) <= 1, np.arcsin(np.clip(outer, -1, 1)), np.nan)) + 0 * inner
-    )
+    return np.asarray(np.rad2deg(np.where(np.abs(outer) <= 1, np.arcsin(np.clip(outer, -1, 1)), np.nan)) + 0 * inner)
 
 
 def coupling_slopes(N: ArrayLike, n_p: ArrayLike, base_angle_deg: ArrayLike) -> AngleSlopes:

@@ -125,6 +125,4 @@ def _roots(layers: Layers, order: Array) -> Array:
         q[act[done]] = np.where(miss == 0, x, new)[done]
         keep = ~done
         act, x, lo, hi, target = act[keep], new[keep], lo[keep], hi[keep], target[keep]
-    raise ArithmeticError(
-        f"mode search did not converge for {act.size} modes (first at batch index {act[0]})"
-    )
+    raise ArithmeticError(f"mode search did not converge for {act.size} modes (first at batch index {act[0]})")
