@@ -133,6 +133,7 @@ class Estimate:
     axis: str | None = None  # any | in_plane | normal, for an index
     wavelength_nm: float | None = None
     interval: str = "parabolic"  # parabolic | profile: how low95 and high95 were found
+    prior: tuple[float, float] | None = None  # stated value and u of a known quantity, in `unit`
 
 
 @dataclass(frozen=True, slots=True)

@@ -87,7 +87,7 @@ def flatten(
         return np.broadcast_to(np.asarray(x, dtype=float), shape).reshape(size)
 
     def flat_layers(x: ArrayLike, count: int) -> Array:
-        return np.broadcast_to(np.asarray(x, dtype=float), (*shape, count)).reshape(size, count).T
+        return np.ascontiguousarray(np.broadcast_to(np.asarray(x, dtype=float), (*shape, count)).reshape(size, count).T)
 
     n2 = flat_layers(n, layers) ** 2
     m2 = n2 if n_normal is None else flat_layers(n_normal, layers) ** 2

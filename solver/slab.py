@@ -59,10 +59,12 @@ def mode_index(
     m = np.asarray(order)
     shape = batch_shape(n_, t, lam, tm, m, *_normal_shape(n_normal))
     flat_m = np.broadcast_to(m, shape).reshape(-1).astype(float)
-    layers = flatten(n_, n_normal, t, lam, tm, shape)
     if n_.shape[-1] == 3:
-        return three_layer_index(layers, flat_m).reshape(shape)
-    return np.sqrt(_roots(layers, flat_m)).reshape(shape)
+        flat = [np.broadcast_to(x, (*shape, k)).reshape(-1, k) for x, k in ((n_, 3), (t, 1))]
+        normal = None if n_normal is None else np.broadcast_to(n_normal, (*shape, 3)).reshape(-1, 3)
+        rest = (np.broadcast_to(x, shape).reshape(-1) for x in (lam, tm))
+        return three_layer_index(flat[0], normal, flat[1], *rest, flat_m).reshape(shape)
+    return np.sqrt(_roots(flatten(n_, n_normal, t, lam, tm, shape), flat_m)).reshape(shape)
 
 
 def all_modes(

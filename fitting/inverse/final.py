@@ -1,0 +1,131 @@
+"""The final fit of one site by lmfit, with covariance split into random and shared parts and its budget."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+
+from ..observables.film import IntArray
+from ..records import Array
+from .descent import Linear, Prior, linearise
+from .lmfit_step import Solution, minimise
+from .problem import SiteProblem
+
+
+@dataclass(frozen=True)
+class SiteFit:
+    """Best unknowns (P), covariance (P, P) with the shared unknowns as the whole table leaves them, the random part of the
+    covariance, and the prior used. chi2 and dof count readings and priors; jacobian (R, P) is divided by u."""
+
+    theta: Array
+    covariance: Array
+    random: Array
+    chi2: float
+    dof: int
+    jacobian: Array
+    predicted: Array
+    exists: Array
+    at_edge: Array
+    success: bool
+    prior: Prior
+
+
+class _Cached:
+    """Residuals and Jacobian come from one mode solve: remembered for the last point asked for."""
+
+    def __init__(self, problem: SiteProblem, orders: IntArray, prior: Prior) -> None:
+        self.problem, self.orders, self.prior = problem, orders[None, :], prior
+        self.root = _root(prior.precision)
+        self.at: bytes = b""
+        self.lin: Linear | None = None
+
+    def look(self, x: Array) -> Linear:
+        if self.lin is None or x.tobytes() != self.at:
+            self.at = x.tobytes()
+            self.lin = linearise(self.problem.layout, self.problem.data, x[None, :], self.orders)
+        return self.lin
+
+    def residual(self, x: Array) -> Array:
+        return np.concatenate([self.look(x).residual[0], self.root @ (self.prior.mean - x)])
+
+    def jacobian(self, x: Array) -> Array:
+        return np.concatenate([-self.look(x).jacobian[0], -self.root])
+
+
+def _root(precision: Array) -> Array:
+    """Square root of the prior's precision, rows only where there is a prior."""
+    has = np.flatnonzero(np.diag(precision) > 0)
+    out = np.zeros((has.size, precision.shape[0]))
+    if has.size:
+        out[:, has] = np.linalg.cholesky(precision[np.ix_(has, has)]).T
+    return out
+
+
+def fit_site(problem: SiteProblem, orders: IntArray, theta: Array, prior: Prior) -> SiteFit:
+    """lmfit from a start close to the minimum; orders (R) with -1 for readings left out."""
+    layout = problem.layout
+    low, high = layout.bounds()
+    cached = _Cached(problem, orders, prior)
+    span = high - low
+    start = np.clip(theta, low + 1e-7 * span, high - 1e-7 * span)
+    names = [p.name for p in layout.parameters]
+    s = minimise(cached.residual, cached.jacobian, names, start, low, high)
+    lin = cached.look(s.values)
+    return _split(problem, orders, s, lin, prior)
+
+
+def _split(problem: SiteProblem, orders: IntArray, s: Solution, lin: Linear, prior: Prior) -> SiteFit:
+    layout = problem.layout
+    used = int((orders >= 0).sum())
+    local = ~layout.shared
+    jac = lin.jacobian[0]
+    covariance, random = covariances(jac, prior.precision, local, layout.fitted, layout.bounds())
+    return SiteFit(
+        theta=s.values,
+        covariance=covariance,
+        random=random,
+        chi2=s.chi2,
+        dof=used - int(layout.fitted.sum()),
+        jacobian=jac,
+        predicted=lin.predicted[0],
+        exists=lin.exists[0],
+        at_edge=s.at_edge & layout.fitted,
+        success=s.success,
+        prior=prior,
+    )
+
+
+def covariances(
+    jac: Array, precision: Array, local: Array, fitted: Array, bounds: tuple[Array, Array]
+) -> tuple[Array, Array]:
+    """Covariance (P, P) and its random part. jac (R, P) divided by u; precision of the priors; local: not shared.
+
+    Random is what this site's reading noise does with the shared unknowns held; the rest, the shared unknowns and the known
+    thicknesses of the stack, is common to the sites. A fitted unknown that nothing determines counts as spread evenly
+    over its window, so that the matrix exists; the rank test keeps such a number from being written.
+    """
+    width = bounds[1] - bounds[0]
+    even = np.diag(np.where(fitted & np.isfinite(width), 12 / width**2, 0.0))
+    data = jac.T @ jac
+    information = data + precision + even * 1e-6
+    try:
+        covariance = np.linalg.inv(information)
+    except np.linalg.LinAlgError:
+        covariance = np.linalg.inv(data + precision + even)
+    a = np.flatnonzero(local)
+    random = np.zeros_like(covariance)
+    if a.size:
+        held = np.linalg.inv(information[np.ix_(a, a)])
+        random[np.ix_(a, a)] = held @ data[np.ix_(a, a)] @ held
+    return covariance, random
+
+
+def shared_gain(fit: SiteFit, local: Array) -> Array:
+    """How the local unknowns follow the shared ones: d(local)/d(shared), (local, shared)."""
+    information = fit.jacobian.T @ fit.jacobian + fit.prior.precision
+    a, b = np.flatnonzero(local), np.flatnonzero(~local)
+    if not a.size or not b.size:
+        return np.zeros((a.size, b.size))
+    gain: Array = -np.linalg.solve(information[np.ix_(a, a)], information[np.ix_(a, b)])
+    return gain

@@ -1,0 +1,166 @@
+"""First look at a site: which readings are which modes, what is a stray, and is there an answer at all."""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from dataclasses import dataclass, field
+
+import numpy as np
+
+from ..flags import flag
+from ..observables.film import IntArray
+from ..records import Array, Flag
+from . import candidates as cand
+from .assignment import FAR, LABEL_PRICE, Assignment, rank, stray_price
+from .descent import Prior, descend, linearise
+from .problem import SiteProblem
+
+# A fit less likely than this is called poor (common practice, no source).
+POOR = 1e-3
+# Orders are certain when all rivals together have less than this; below the second limit no number is given.
+AMBIGUOUS = 0.002
+UNDECIDED = 0.2
+
+
+@dataclass
+class Settled:
+    """orders (R) and unknowns (P) of the accepted assignment, None if there is none; rivals with their price difference."""
+
+    orders: IntArray | None
+    theta: Array | None
+    rivals: tuple[Assignment, ...] = ()
+    price: float = 0.0
+    flags: list[Flag] = field(default_factory=list)
+    notes: list[Flag] = field(default_factory=list)
+    remarks: dict[int, str] = field(default_factory=dict)
+    withhold: bool = False
+
+    @property
+    def good(self) -> bool:
+        return self.orders is not None and not self.flags and not self.withhold
+
+
+def settle(problem: SiteProblem, hint: Array | None = None) -> Settled:
+    """Decide a site's orders with the stated priors alone. hint: unknowns of a like site, tried first if all are labelled."""
+    layout, data, label = problem.layout, problem.data, problem.label
+    prior = Prior.of(layout)
+    labelled = bool((label >= 0).all())
+    if labelled and hint is not None and hint.size == len(layout.parameters):
+        quick = _try_labels(problem, hint, prior)
+        if quick is not None:
+            return quick
+    ranked = rank(layout, data, label, prior)
+    out = Settled(None, None)
+    if (label >= 0).any():
+        ranked = _doubt_labels(problem, ranked, prior, out)
+    if not ranked:
+        out.flags.append(flag("no_mode_possible", _reach(problem)))
+        return out
+    best = ranked[0]
+    out.orders, out.theta, out.price = best.orders, best.theta, best.price
+    out.rivals = tuple(ranked[1:])
+    _judge(problem, out, best, labelled)
+    return out
+
+
+def _try_labels(problem: SiteProblem, hint: Array, prior: Prior) -> Settled | None:
+    """Orders as labelled from a like site's answer: taken if every reading fits, else the long way."""
+    fit = descend(
+        problem.layout, problem.data, problem.label[None, :], hint[None, :], prior, max_steps=10, tolerance=1e-4
+    )
+    low, high = problem.layout.bounds()
+    inside = bool(((fit.theta[0] > low) & (fit.theta[0] < high)).all())
+    dof = problem.label.size - int(problem.layout.fitted.sum())
+    if not inside or not fit.linear.exists.all() or dof < 1 or p_value(float(fit.cost[0]), dof) < POOR:
+        return None
+    return Settled(problem.label.copy(), fit.theta[0])
+
+
+def p_value(chi2: float, dof: int) -> float:
+    """Probability of a larger chi-squared."""
+    from scipy.special import gammaincc
+
+    return float(gammaincc(dof / 2, chi2 / 2))
+
+
+def _doubt_labels(problem: SiteProblem, ranked: list[Assignment], prior: Prior, out: Settled) -> list[Assignment]:
+    """Believe the labels unless other orders fit far better, or the labels fit nothing."""
+    layout, data = problem.layout, problem.data
+    dof = problem.label.size - int(layout.fitted.sum())
+    if ranked and (ranked[0].orders >= 0).all() and (dof < 1 or p_value(ranked[0].chi2, dof) > POOR):
+        return ranked
+    free = rank(layout, data, np.full_like(problem.label, -1), prior)
+    if not free or (ranked and free[0].price + LABEL_PRICE > ranked[0].price):
+        return ranked
+    typed, found = problem.label, free[0].orders
+    changed = [
+        f"{r.pol}{t} at {r.value:g} reads as {r.pol}{f}"
+        for r, t, f in zip(problem.readings, typed, found, strict=True)
+        if t >= 0 and f >= 0 and t != f
+    ]
+    out.flags.append(flag("label_doubtful", "; ".join(changed) + "." if changed else ""))
+    return free
+
+
+def _reach(problem: SiteProblem) -> str:
+    """What the readings state as effective indices, for the message that no film fits."""
+    sc = cand.scene(problem.layout, problem.data, problem.label)
+    low, high = float(np.min(sc.N)), float(np.max(sc.N))
+    return f"As stated, the readings mean effective indices from {low:.4f} to {high:.4f}."
+
+
+def _judge(problem: SiteProblem, out: Settled, best: Assignment, labelled: bool) -> None:
+    """Flags and notes on strays and rivals."""
+    used = best.orders >= 0
+    rejected = int((~used).sum())
+    if not used.any():
+        out.orders = out.theta = None
+        out.flags.append(flag("no_mode_possible", _reach(problem)))
+        return
+    if rejected:
+        _explain_strays(problem, out, best)
+        if rejected * 3 >= used.size:
+            out.flags.append(flag("many_rejected", f"{rejected} of {used.size} readings."))
+    doubt = 1 - best.probability
+    if doubt > AMBIGUOUS:
+        out.flags.append(flag("order_ambiguous", f"The best one has probability {best.probability:.3f}."))
+        out.withhold = doubt > UNDECIDED
+    elif not labelled:
+        out.notes.append(flag("orders_found"))
+
+
+def _explain_strays(problem: SiteProblem, out: Settled, best: Assignment) -> None:
+    """Say of each rejected reading how far it is from a mode, and whether a whole degree would mend it."""
+    price = stray_price(problem.data)
+    for r in np.flatnonzero(best.orders < 0):
+        reading = problem.readings[r]
+        hint = _whole_degree(problem, best, int(r), float(price[r])) if problem.data.is_angle[0, r] else ""
+        text = f"fits no mode of this film{hint}"
+        out.remarks[int(r)] = text
+        where = f"row {reading.place.row}" if reading.place.row is not None else "reading"
+        out.notes.append(flag("reading_rejected", f"{where}: {reading.pol} {reading.value:g} {text}."))
+
+
+def _whole_degree(problem: SiteProblem, best: Assignment, r: int, price: float) -> str:
+    """A mode with no reading that the angle would meet if its whole degrees were typed wrongly."""
+    taken = {
+        int(best.orders[k])
+        for k in np.flatnonzero(best.orders >= 0)
+        if problem.data.context[0, k] == problem.data.context[0, r]
+    }
+    trial = np.full(best.orders.size, -1)
+    for m in range(max(taken, default=-1) + 3):
+        trial[r] = m
+        lin = linearise(problem.layout, problem.data, best.theta[None, :], trial[None, :])
+        if m in taken or not lin.exists[0, r]:
+            continue
+        off = problem.data.measured[0, r] - lin.predicted[0, r]
+        whole = round(off)
+        if whole != 0 and abs(off - whole) < 4 * problem.data.u[0, r] and abs(whole) <= 10:
+            return f"; as {problem.readings[r].pol}{m} it is {whole:+d} degrees off: a typing error?"
+    return ""
+
+
+def rivals_far(rivals: Sequence[Assignment], price: float) -> list[Assignment]:
+    """Rivals worth listing: those that the data do not rule out at one in a thousand."""
+    return [r for r in rivals if r.price - price < FAR and r.probability > 1e-3]
