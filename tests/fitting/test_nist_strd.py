@@ -1,4 +1,4 @@
-"""The product's own least-squares step on the NIST StRD nonlinear-regression sets: certified values and standard errors."""
+"""The product's own least-squares step on the NIST StRD nonlinear sets: certified values and standard errors."""
 
 from __future__ import annotations
 
@@ -7,8 +7,8 @@ from pathlib import Path
 
 import numpy as np
 import pytest
-
 from layerlot.fitting.inverse.lmfit_step import minimise
+
 from tests.fitting.nist_models import MODELS, jacobian, split
 
 SETS = json.loads((Path(__file__).parents[1] / "reference" / "nist_strd_nonlinear.json").read_text())["sets"]
@@ -47,7 +47,7 @@ def test_certified_sum_of_squares_belongs_to_the_model(name):
     y, x = split(name, entry["data"])
     rss = float(np.sum((MODELS[name](np.array(entry["certified"]), x) - y) ** 2))
     if name in ROUNDING_BOUND:
-        # Eleven certified digits of the parameters put the response off by 1e-10, a thousand times its certified residual.
+        # Eleven certified digits of the parameters put the response off by 1e-10, a thousand certified residuals.
         assert rss < y.size * (1e-10 * np.abs(y).max()) ** 2
     else:
         assert log_relative_error(rss, entry["rss"]) > 8
