@@ -12,13 +12,18 @@ guides see H. Kogelnik, Topics in Applied Physics 7, ch. 2 (1975), sec. 2.1.
 
 from __future__ import annotations
 
+from collections.abc import Sequence
 from dataclasses import dataclass
 
 import numpy as np
-from numpy.typing import ArrayLike
+from numpy.typing import ArrayLike, NDArray
 
 from .layers import Array, Layers, batch_shape, check_stack, flatten
 from .phase import sweep, wave_numbers
+from .three_layer import three_layer_derivatives
+
+
+Flags = NDArray[np.bool_]
 
 
 @dataclass(frozen=True, slots=True)
@@ -65,8 +70,10 @@ def mode_derivatives(
     index = np.broadcast_to(N_, shape).reshape(-1)
     known = np.isfinite(index)
     count, films = n_.shape[-1], t.shape[-1]
-    out = [np.full((k, index.size), np.nan) for k in (count, count, films, 1)]
-    if known.any():
+    out: Sequence[Array] = [np.full((k, index.size), np.nan) for k in (count, count, films, 1)]
+    if known.all():
+        out = _derivatives(layers, index, np.broadcast_to(lam, shape).reshape(-1), n_normal is None)
+    elif known.any():
         wave = np.broadcast_to(lam, shape).reshape(-1)[known]
         parts = _derivatives(layers.take(known), index[known], wave, n_normal is None)
         for whole, part in zip(out, parts):
@@ -76,18 +83,24 @@ def mode_derivatives(
 
 
 def _derivatives(layers: Layers, N: Array, wavelength_um: Array, isotropic: bool) -> tuple[Array, Array, Array, Array]:
+    general = _stack_derivatives if layers.w.shape[0] > 3 else three_layer_derivatives
+    along, normal, dt, dl = general(layers, N, wavelength_um)
+    if isotropic:
+        along, normal = along + normal, np.zeros_like(normal)
+    return along, normal, dt, dl
+
+
+def _stack_derivatives(layers: Layers, N: Array, wavelength_um: Array) -> tuple[Array, Array, Array, Array]:
     profile = _profile(layers, N)
     w, a, b, q = layers.w, layers.a, layers.b, N**2
     total = 2 * N * (b * profile.psi2).sum(axis=0)
-    is_te = (a != 1).any(axis=0)  # TM has a = 1 in every layer
-    along = np.where(is_te, 2 * np.sqrt(a) * profile.psi2, 2 * np.sqrt(w) * profile.wpsi1) / total
-    normal = np.where(is_te, 0.0, 2 * q * b * np.sqrt(b) * profile.psi2) / total
+    tm = (a == 1).all(axis=0)
+    along = np.where(tm, 2 * np.sqrt(w) * profile.wpsi1, 2 * np.sqrt(a) * profile.psi2) / total
+    normal = np.where(tm, 2 * q * b * np.sqrt(b) * profile.psi2, 0.0) / total
     psi, v = profile.psi_low, profile.v_low
     h = v**2 / w[1:-1] + (a[1:-1] - q * b[1:-1]) * psi**2
     dt = h / total * (2 * np.pi / wavelength_um)
     dl = -2 * profile.wpsi1.sum(axis=0) / (total * wavelength_um)
-    if isotropic:
-        along, normal = along + normal, np.zeros_like(normal)
     return along, normal, dt, dl[None]
 
 
@@ -126,28 +139,27 @@ def _profile(layers: Layers, N: Array) -> _Profile:
     return _Profile(psi_l, v_l, psi_h, v_h, psi2, wpsi1)
 
 
-def _waves(layers: Layers, s: Array, osc: Array) -> tuple[Array, Array, Array]:
-    """cos-like c, sin-like sigma = sin(x)/x and (1 - sinc 2x) / (2 x^2) of every interior layer, entire in g tau^2."""
+def _waves(layers: Layers, s: Array, osc: Flags) -> tuple[Array, Array]:
+    """sin(x)/x and (1 - sinc 2x) / (2 x^2) of every interior layer, entire in g tau^2 = x^2."""
     x = s[1:-1] * layers.tau
     inside = osc[1:-1]
     flat = np.minimum(x, 30.0)  # beyond, `_integrals_from` takes the exponential form
     x_safe = np.where(x < 1e-150, 1e-150, x)
     f_safe = np.maximum(flat, 1e-150)
-    c = np.where(inside, np.cos(x), np.cosh(flat))
     sigma = np.where(inside, np.sin(x_safe) / x_safe, np.sinh(f_safe) / f_safe)
     z = np.where(inside, x**2, -(flat**2))
     sinc2 = np.where(inside, np.sin(2 * x_safe) / (2 * x_safe), np.sinh(2 * f_safe) / (2 * f_safe))
     # (1 - sinc(2 sqrt z)) / (2 z) = sum (-1)^k (4 z)^k * 2 / (2k + 3)!, used where the difference would cancel
     series = 1 / 3 - z / 15 * (1 - 2 * z / 21 * (1 - z / 18 * (1 - 2 * z / 55 * (1 - z / 39))))
     rest = np.where(np.abs(z) < 0.02, series, (1 - sinc2) / (2 * np.where(z == 0, 1, z)))
-    return c, sigma, rest
+    return sigma, rest
 
 
-def _integrals_from(layers: Layers, s: Array, osc: Array, psi: Array, v: Array) -> tuple[Array, Array]:
+def _integrals_from(layers: Layers, s: Array, osc: Flags, psi: Array, v: Array) -> tuple[Array, Array]:
     """Integrals of psi^2 and w psi'^2 over each interior layer from its entry values, (L - 2, B)."""
     w, tau, si = layers.w[1:-1], layers.tau, s[1:-1]
     g = np.where(osc[1:-1], si**2, -(si**2))
-    c, sigma, rest = _waves(layers, s, osc)
+    sigma, rest = _waves(layers, s, osc)
     cc = tau * (1 - g * tau**2 * rest)
     cs = (tau * sigma) ** 2 / 2
     ss = tau**3 * rest
@@ -165,7 +177,7 @@ def _integrals_from(layers: Layers, s: Array, osc: Array, psi: Array, v: Array) 
     return psi2, wpsi1
 
 
-def _cross(layers: Layers, s: Array, osc: Array, psi: Array, v: Array) -> tuple[Array, Array]:
+def _cross(layers: Layers, s: Array, osc: Flags, psi: Array, v: Array) -> tuple[Array, Array]:
     """psi and v at the far edge of each interior layer."""
     w, tau, si = layers.w[1:-1], layers.tau, s[1:-1]
     x = si * tau
@@ -195,7 +207,8 @@ def mode_field(
     layers = flatten(n_, n_normal, t, lam, tm, (1,))
     k0 = 2 * np.pi / float(lam)
     profile = _profile(layers, np.atleast_1d(np.asarray(N, dtype=float)))
-    s, osc = (y[:, 0] for y in wave_numbers(layers, np.atleast_1d(np.asarray(N, dtype=float)) ** 2))
+    waves, oscillating = wave_numbers(layers, np.atleast_1d(np.asarray(N, dtype=float)) ** 2)
+    s, osc = waves[:, 0], oscillating[:, 0]
     edges = np.concatenate([[0.0], np.cumsum(t)])
     x = np.asarray(x_um, dtype=float)
     out = np.where(x < 0, profile.psi_low[0, 0] * np.exp(np.minimum(x, 0) * k0 * s[0]), 0.0)
@@ -219,7 +232,7 @@ def mode_field(
     return np.asarray(out / grid)
 
 
-def _peak(layers: Layers, profile: _Profile, s: Array, osc: Array) -> float:
+def _peak(layers: Layers, profile: _Profile, s: Array, osc: Flags) -> float:
     """Largest |psi| over the stack: at an edge, or the amplitude of an oscillating layer that holds a crest."""
     best = float(max(np.abs(profile.psi_low).max(), np.abs(profile.psi_high).max()))
     for j in range(layers.tau.shape[0]):

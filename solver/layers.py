@@ -84,14 +84,18 @@ def flatten(
     layers, films = n.shape[-1], t_um.shape[-1]
 
     def flat(x: ArrayLike) -> Array:
-        return np.broadcast_to(np.asarray(x, dtype=float), shape).reshape(size)
+        y = np.asarray(x, dtype=float)
+        return y.reshape(size) if y.shape == shape else np.broadcast_to(y, shape).reshape(size)
 
     def flat_layers(x: ArrayLike, count: int) -> Array:
-        return np.ascontiguousarray(np.broadcast_to(np.asarray(x, dtype=float), (*shape, count)).reshape(size, count).T)
+        y = np.asarray(x, dtype=float)
+        full = (*shape, count)
+        y = y if y.shape == full else np.broadcast_to(y, full)
+        return np.ascontiguousarray(y.reshape(size, count).T)
 
     n2 = flat_layers(n, layers) ** 2
     m2 = n2 if n_normal is None else flat_layers(n_normal, layers) ** 2
-    is_tm = np.broadcast_to(np.asarray(tm, dtype=bool), shape).reshape(size)
+    is_tm = flat(tm) != 0
     one = np.ones_like(n2)
     tau = flat_layers(t_um, films) * (2 * np.pi / flat(wavelength_um))
     if not is_tm.any():

@@ -17,7 +17,7 @@ from typing import Any, NamedTuple
 import numpy as np
 from numpy.typing import NDArray
 
-from .layers import Array, Layers, flatten
+from .layers import SMALLEST_WAVE_NUMBER, Array, Layers, flatten
 
 _BLOCK = 8192
 _THREADS = 2
@@ -53,23 +53,26 @@ def three_layer_index(
     """
     parts = [slice(i, i + _BLOCK) for i in range(0, order.size, _BLOCK)]
 
-    def run(p: slice) -> tuple[Array, NDArray[np.bool_]]:
+    def run(p: slice) -> Array:
         normal = None if n_normal is None else n_normal[p]
         layers = flatten(n[p], normal, t_um[p], wavelength_um[p], tm[p], order[p].shape)
-        return _block(layers, order[p])
+        return solve_layers(layers, order[p])
 
     if len(parts) <= 1:
-        N, settled = run(slice(None))
-    else:
-        # numpy lets go of the interpreter lock inside its loops: two threads share the blocks
-        with ThreadPoolExecutor(min(_THREADS, len(parts))) as pool:
-            N, settled = (np.concatenate(x) for x in zip(*pool.map(run, parts), strict=True))
-    rest = np.flatnonzero(~settled)
-    if rest.size:
-        normal = None if n_normal is None else n_normal[rest]
-        layers = flatten(n[rest], normal, t_um[rest], wavelength_um[rest], tm[rest], rest.shape)
-        edge = _edge(layers, order[rest])
-        N[rest] = _index(layers, edge.top * _bracketed(edge))
+        return run(slice(None))
+    # numpy lets go of the interpreter lock inside its loops: two threads share the blocks
+    with ThreadPoolExecutor(min(_THREADS, len(parts))) as pool:
+        return np.concatenate(list(pool.map(run, parts)))
+
+
+def solve_layers(layers: Layers, order: Array) -> Array:
+    """Effective index of one block (B), NaN where it is not guided."""
+    N, settled = _block(layers, order)
+    if not settled.all():
+        rest = np.flatnonzero(~settled)
+        few = layers.take(rest)
+        edge = _edge(few, order[rest])
+        N[rest] = _index(few, edge.top * _bracketed(edge))
     return N
 
 
@@ -186,3 +189,30 @@ def _bracketed(e: _Edge) -> Array:
         index, lo, hi, phi = index[keep], lo[keep], hi[keep], new[keep]
         e = e.take(keep)
     raise ArithmeticError(f"three-layer mode search did not converge for {index.size} modes")
+
+
+def three_layer_derivatives(layers: Layers, N: Array, wavelength_um: Array) -> tuple[Array, Array, Array, Array]:
+    """dN/dn in the plane (3, B), along the normal (3, B), dN/dt (1, B) and dN/dwavelength (1, B); see `fields`.
+
+    The film's field is a sine of amplitude 1, so edge values and integrals follow from the three wave numbers alone.
+    """
+    w, a, b, tau = layers.w, layers.a, layers.b, layers.tau[0]
+    q = N * N
+    gap = a - q * b
+    s = np.sqrt(np.maximum(np.abs(gap / w), SMALLEST_WAVE_NUMBER**2))
+    gamma = w * s
+    square = gamma * gamma
+    rest = 1 / (square[1] + square[0::2])  # psi^2 at the two edges, for v^2 + gamma^2 psi^2 = 1
+    bow = (gamma[0::2] * rest).sum(axis=0)  # -[psi v] over the film
+    height = 1 / w[1]
+    psi2, wpsi1 = np.empty_like(w), np.empty_like(w)
+    psi2[0::2], wpsi1[0::2] = rest / (2 * s[0::2]), gamma[0::2] * rest / 2
+    psi2[1] = (tau * height + bow) / (2 * gap[1])
+    wpsi1[1] = (tau * height - bow) / 2
+    scale = 1 / (2 * N * (b * psi2).sum(axis=0))
+    tm = (a == 1).all(axis=0)
+    along = np.where(tm, 2 * np.sqrt(w) * wpsi1, 2 * np.sqrt(a) * psi2) * scale
+    normal = np.where(tm, 2 * q * b * np.sqrt(b) * psi2 * scale, 0.0)
+    dt = height * scale * (2 * np.pi / wavelength_um)
+    dl = -2 * wpsi1.sum(axis=0) * scale / wavelength_um
+    return along, normal, dt[None], dl[None]

@@ -61,7 +61,7 @@ class _Scene:
 def scene(layout: Layout, readings: FilmReadings, label: Array) -> _Scene:
     N, per = nominal_index(layout, readings)
     c = readings.context[0]
-    tm = np.array([x.tm for x in layout.contexts])[c]
+    tm = layout.tm[c]
     return _Scene(layout, N[0], (per * readings.u)[0], c, tm, layout.working_um[c], label)
 
 

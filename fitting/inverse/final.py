@@ -32,19 +32,18 @@ class SiteFit:
 
 
 class _Cached:
-    """Residuals and Jacobian come from one mode solve: remembered for the last point asked for."""
+    """Residuals and Jacobian come from one mode solve: remembered for every point of one fit, a dozen at most."""
 
     def __init__(self, problem: SiteProblem, orders: IntArray, prior: Prior) -> None:
         self.problem, self.orders, self.prior = problem, orders[None, :], prior
         self.root = _root(prior.precision)
-        self.at: bytes = b""
-        self.lin: Linear | None = None
+        self.seen: dict[bytes, Linear] = {}
 
     def look(self, x: Array) -> Linear:
-        if self.lin is None or x.tobytes() != self.at:
-            self.at = x.tobytes()
-            self.lin = linearise(self.problem.layout, self.problem.data, x[None, :], self.orders)
-        return self.lin
+        key = x.tobytes()
+        if key not in self.seen:
+            self.seen[key] = linearise(self.problem.layout, self.problem.data, x[None, :], self.orders)
+        return self.seen[key]
 
     def residual(self, x: Array) -> Array:
         return np.concatenate([self.look(x).residual[0], self.root @ (self.prior.mean - x)])
@@ -70,7 +69,8 @@ def fit_site(problem: SiteProblem, orders: IntArray, theta: Array, prior: Prior)
     span = high - low
     start = np.clip(theta, low + 1e-7 * span, high - 1e-7 * span)
     names = [p.name for p in layout.parameters]
-    s = minimise(cached.residual, cached.jacobian, names, start, low, high)
+    # 1e-9 of chi-squared is far below what any u can resolve
+    s = minimise(cached.residual, cached.jacobian, names, start, low, high, tolerance=1e-9)
     lin = cached.look(s.values)
     return _split(problem, orders, s, lin, prior)
 

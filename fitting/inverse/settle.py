@@ -13,7 +13,7 @@ from ..records import Array, Flag
 from . import candidates as cand
 from .assignment import FAR, LABEL_PRICE, Assignment, rank, stray_price
 from .descent import Prior, descend, linearise
-from .problem import SiteProblem
+from .problem import SiteProblem, stack_sites
 
 # A fit less likely than this is called poor (common practice, no source).
 POOR = 1e-3
@@ -40,15 +40,45 @@ class Settled:
         return self.orders is not None and not self.flags and not self.withhold
 
 
-def settle(problem: SiteProblem, hint: Array | None = None) -> Settled:
-    """Decide a site's orders with the stated priors alone. hint: unknowns of a like site, tried first if all are labelled."""
+def settle_all(problems: Sequence[SiteProblem]) -> list[Settled]:
+    """Decide the orders of several sites with the stated priors alone.
+
+    Fully labelled sites under one layout are first tried together, as labelled, from the answer of the first of them; those in
+    which every reading fits are done. The others, and unlabelled ones, go the long way of `settle`.
+    """
+    out: dict[int, Settled] = {}
+    groups: dict[int, list[int]] = {}
+    for i, p in enumerate(problems):
+        if (p.label >= 0).all():
+            groups.setdefault(id(p.layout), []).append(i)
+    for members in groups.values():
+        first = out[members[0]] = settle(problems[members[0]])
+        if first.good and first.theta is not None and len(members) > 1:
+            out.update(_try_labels(problems, members[1:], first.theta))
+    return [out[i] if i in out else settle(p) for i, p in enumerate(problems)]
+
+
+def _try_labels(problems: Sequence[SiteProblem], members: Sequence[int], hint: Array) -> dict[int, Settled]:
+    """Sites of one layout as labelled, in one batch: those that fit without a reservation."""
+    mine = [problems[i] for i in members]
+    layout = mine[0].layout
+    data, orders = stack_sites(mine, [p.label for p in mine])
+    fit = descend(layout, data, orders, np.tile(hint, (len(mine), 1)), Prior.of(layout), max_steps=12, tolerance=1e-5)
+    low, high = layout.bounds()
+    inside = ((fit.theta > low) & (fit.theta < high)).all(axis=1) & fit.linear.exists.all(axis=1)
+    out = {}
+    for k, i in enumerate(members):
+        dof = problems[i].label.size - int(layout.fitted.sum())
+        if inside[k] and dof > 0 and p_value(float(fit.cost[k]), dof) > POOR:
+            out[i] = Settled(problems[i].label.copy(), fit.theta[k])
+    return out
+
+
+def settle(problem: SiteProblem) -> Settled:
+    """Decide one site's orders by the search over assignments."""
     layout, data, label = problem.layout, problem.data, problem.label
     prior = Prior.of(layout)
     labelled = bool((label >= 0).all())
-    if labelled and hint is not None and hint.size == len(layout.parameters):
-        quick = _try_labels(problem, hint, prior)
-        if quick is not None:
-            return quick
     ranked = rank(layout, data, label, prior)
     out = Settled(None, None)
     if (label >= 0).any():
@@ -61,19 +91,6 @@ def settle(problem: SiteProblem, hint: Array | None = None) -> Settled:
     out.rivals = tuple(ranked[1:])
     _judge(problem, out, best, labelled)
     return out
-
-
-def _try_labels(problem: SiteProblem, hint: Array, prior: Prior) -> Settled | None:
-    """Orders as labelled from a like site's answer: taken if every reading fits, else the long way."""
-    fit = descend(
-        problem.layout, problem.data, problem.label[None, :], hint[None, :], prior, max_steps=10, tolerance=1e-4
-    )
-    low, high = problem.layout.bounds()
-    inside = bool(((fit.theta[0] > low) & (fit.theta[0] < high)).all())
-    dof = problem.label.size - int(problem.layout.fitted.sum())
-    if not inside or not fit.linear.exists.all() or dof < 1 or p_value(float(fit.cost[0]), dof) < POOR:
-        return None
-    return Settled(problem.label.copy(), fit.theta[0])
 
 
 def p_value(chi2: float, dof: int) -> float:

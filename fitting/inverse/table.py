@@ -25,13 +25,13 @@ from .answer import SiteAnswer, answer, unanswered
 from .joint import Shared, site_prior, solve_shared
 from .means import group_means
 from .problem import SiteProblem, build_problems
-from .settle import Settled, settle
+from .settle import Settled, settle_all
 
 A = TypeVar("A")
 B = TypeVar("B")
 
 Progress = Callable[[int, int], None]
-_CHUNK = 16
+_CHUNK = 32
 # A shared quantity this many of its own standard uncertainties from its stated value is not chance.
 FAR_FROM_PRIOR = 3.5
 
@@ -53,7 +53,7 @@ def fit_table(
     stop = should_stop or (lambda: False)
     with _Pool(workers if len(problems) > 2 * _CHUNK else 1) as pool:
         settled: list[Settled] = []
-        for part in pool.map(_settle_chunk, list(_chunks(problems))):
+        for part in pool.map(settle_all, list(_chunks(problems))):
             settled += part
             _tell(progress, len(settled), total)
             if stop():
@@ -107,17 +107,6 @@ def _ignore_interrupt() -> None:
     import signal
 
     signal.signal(signal.SIGINT, signal.SIG_IGN)
-
-
-def _settle_chunk(problems: Sequence[SiteProblem]) -> list[Settled]:
-    hints: dict[int, Array] = {}
-    out = []
-    for p in problems:
-        s = settle(p, hints.get(len(p.layout.parameters)))
-        if s.good and s.theta is not None:
-            hints[len(p.layout.parameters)] = s.theta
-        out.append(s)
-    return out
 
 
 def _answer_chunk(shared: Shared, jobs: Sequence[tuple[SiteProblem, Settled, object]]) -> list[SiteAnswer]:

@@ -60,17 +60,19 @@ def predict(layout: Layout, readings: FilmReadings, theta: Array, order: IntArra
     wanted = np.broadcast_to(readings.valid, ctx.shape) & (order >= 0)
     s_of, _ = np.nonzero(wanted)
     c = ctx[wanted]
-    n = layout.n_fixed[c] + np.einsum("klp,kp->kl", layout.n_map[c], theta[s_of])
+    mine = theta[s_of]
+    n_map = layout.n_map[c]
+    n = layout.n_fixed[c] + (n_map @ mine[:, :, None])[..., 0]
     t = (layout.t_fixed + theta @ layout.t_map.T)[s_of]
-    tm = np.array([x.tm for x in layout.contexts])[c]
+    tm = layout.tm[c]
     normal = None
     if layout.uniaxial:
-        normal = layout.normal_fixed[c] + np.einsum("klp,kp->kl", layout.normal_map[c], theta[s_of])
+        normal = layout.normal_fixed[c] + (layout.normal_map[c] @ mine[:, :, None])[..., 0]
     modes = film_modes(n, np.maximum(t, 0.0), layout.working_um[c], order[wanted], tm, normal)
     there = np.isfinite(modes.N)
-    slope = np.einsum("kl,klp->kp", modes.dn, layout.n_map[c]) + modes.dt_per_um @ layout.t_map
+    slope = (modes.dn[:, None, :] @ n_map)[:, 0] + modes.dt_per_um @ layout.t_map
     if normal is not None:
-        slope += np.einsum("kl,klp->kp", modes.dn_normal, layout.normal_map[c])
+        slope += (modes.dn_normal[:, None, :] @ layout.normal_map[c])[:, 0]
     floor = np.where(tm, (n if normal is None else normal)[:, 0], n[:, 0])
     N = np.where(there, modes.N, np.maximum(floor, n[:, -1]))
     slope = np.where(there[:, None], slope, 0.0)
@@ -92,7 +94,7 @@ def _read(
     """Effective index to reading: unchanged, or as a coupling angle with the prism's own unknowns."""
     if not is_angle.any():
         return N, slope, np.ones(N.shape, dtype=bool)
-    n_p = layout.prism_fixed[c] + np.einsum("kp,kp->k", layout.prism_map[c], theta)
+    n_p = layout.prism_fixed[c] + (layout.prism_map[c] * theta).sum(axis=1)
     base = layout.base_fixed + theta @ layout.base_map
     zero = layout.zero_fixed + theta @ layout.zero_map
     capped = np.minimum(N, n_p * (1 - 1e-9))

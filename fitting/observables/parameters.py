@@ -13,6 +13,7 @@ from collections.abc import Sequence
 from dataclasses import dataclass, field
 
 import numpy as np
+from numpy.typing import NDArray
 
 from ..records import Array
 from ..stack import IndexSpec, Prism, Quantity, Stack
@@ -64,6 +65,7 @@ class Layout:
     parameters: tuple[Parameter, ...]
     contexts: tuple[Context, ...]
     working_um: Array
+    tm: NDArray[np.bool_]
     n_fixed: Array
     n_map: Array
     normal_fixed: Array
@@ -125,10 +127,10 @@ def build_layout(stack: Stack, contexts: Sequence[Context]) -> Layout:
     builder = _Builder()
     waves = sorted({c.wavelength_um for c in contexts})
     mean_x = float(np.mean([1 / w**2 for w in waves]))
-    t_rows = [_thickness(builder, layer.name, layer.thickness_um) for layer in stack.layers[1:-1]]
     n_rows = [[_index(builder, stack, k, c, "in_plane", mean_x) for k in range(len(stack.layers))] for c in contexts]
     m_rows = [[_index(builder, stack, k, c, "normal", mean_x) for k in range(len(stack.layers))] for c in contexts]
     curves = _curves(builder, stack, contexts, mean_x)
+    t_rows = [_thickness(builder, layer.name, layer.thickness_um) for layer in stack.layers[1:-1]]
     uniaxial = any(layer.index_normal is not None for layer in stack.layers)
     prism = stack.prism
     p_rows = [_prism(builder, stack, prism, c) if prism else (np.nan, {}) for c in contexts]
@@ -150,6 +152,7 @@ def build_layout(stack: Stack, contexts: Sequence[Context]) -> Layout:
         parameters=tuple(builder.parameters),
         contexts=tuple(contexts),
         working_um=working,
+        tm=np.array([c.tm for c in contexts], dtype=bool),
         n_fixed=np.array([[r[0] for r in rows] for rows in n_rows]),
         n_map=np.array([matrix(rows) for rows in n_rows]),
         normal_fixed=np.array([[r[0] for r in rows] for rows in m_rows]),
