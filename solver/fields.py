@@ -22,14 +22,14 @@ from .layers import Array, Layers, batch_shape, check_stack, flatten
 from .phase import sweep, wave_numbers
 from .three_layer import three_layer_derivatives
 
-
 Flags = NDArray[np.bool_]
 
 
 @dataclass(frozen=True, slots=True)
 class SlabDerivatives:
     """dN/d(index) (..., L) per layer, dN/d(index along the normal) (..., L), dN/dt in 1/µm (..., L-2), and
-    dN/d(wavelength) in 1/µm (...) at fixed indices. For isotropic layers `dn` is the whole derivative and `dn_normal` zero."""
+    dN/d(wavelength) in 1/µm (...) at fixed indices. For isotropic layers `dn` is the whole derivative and `dn_normal`
+    zero."""
 
     dn: Array
     dn_normal: Array

@@ -15,7 +15,8 @@ from .three_layer import solve_layers, three_layer_derivatives
 
 
 class FilmModes(NamedTuple):
-    """Real effective index (...), its derivatives as in `fields.SlabDerivatives`, and the imaginary part (0 if guided)."""
+    """Real effective index (...), its derivatives as in `fields.SlabDerivatives`, and the imaginary part (0 if
+    guided)."""
 
     N: Array
     dn: Array
@@ -41,7 +42,8 @@ def film_modes(
 ) -> FilmModes:
     """Effective index and closed-form derivatives of given orders; NaN where the mode does not exist.
 
-    Arguments as for `slab.mode_index`. For a leaky stack the real part and the derivatives of the real part are returned.
+    Arguments as for `slab.mode_index`. For a leaky stack the real part and the derivatives of the real part are
+    returned.
     """
     n_, t, lam = check_stack(n, t_um, wavelength_um)
     if is_leaky(n_):

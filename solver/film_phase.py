@@ -1,13 +1,13 @@
 """The mode condition solved for thickness: how thick one layer must be for a stated effective index to be mode m.
 
-For a layer that oscillates at N, the phase condition of `phase` reads  alpha(N) + k t = (m + 1) pi  with alpha the sum of
-the two edge angles, which depends on the other layers only. So t follows in closed form for every m, and an order that is
-not an integer says how far a reading is from any mode.
+For a layer that oscillates at N, the phase condition of `phase` reads  alpha(N) + k t = (m + 1) pi  with alpha the
+sum of the two edge angles, which depends on the other layers only. So t follows in closed form for every m, and an
+order that is not an integer says how far a reading is from any mode.
 """
 
 from __future__ import annotations
 
-from typing import NamedTuple
+from typing import Any, NamedTuple
 
 import numpy as np
 from numpy.typing import ArrayLike
@@ -15,13 +15,14 @@ from numpy.typing import ArrayLike
 from .layers import Array, Layers, batch_shape, check_stack, flatten
 from .phase import sweep, wave_numbers
 
-# Stands for "the field is zero here" in place of a half-space of far higher index: its decay length is a millionth of 1/k0.
+# Stands for "the field is zero here" in place of a half-space of far higher index: its decay length is a millionth of
+# 1/k0.
 _WALL = -1e12
 
 
 class FilmPhase(NamedTuple):
-    """alpha (...): sum of edge angles in radians; k (...): transverse wave number of the layer in rad/µm; NaN where the layer
-    does not oscillate at N (index at or below N)."""
+    """alpha (...): sum of edge angles in radians; k (...): transverse wave number of the layer in rad/µm; NaN where
+    the layer does not oscillate at N (index at or below N)."""
 
     alpha: Array
     k_per_um: Array
@@ -59,14 +60,15 @@ def film_phase(
 
 
 def close(layers: Layers, q: Array, film: int) -> Layers:
-    """The closed companion: half-spaces that would radiate at q replaced by their neighbour, or by a wall at the film."""
+    """The closed companion: half-spaces that would radiate at q replaced by their neighbour, or by a wall at the
+    film."""
     w, a, b = (x.copy() for x in (layers.w, layers.a, layers.b))
     for outer, inner in ((0, 1), (-1, -2)):
         radiates = a[outer] > q * b[outer]
         if not radiates.any():
             continue
         if inner % a.shape[0] == film:
-            put = (1.0, _WALL, 0.0)
+            put: tuple[Any, ...] = (1.0, _WALL, 0.0)
         else:
             neighbour_decays = a[inner] < q * b[inner]
             put = tuple(np.where(neighbour_decays, x[inner], y) for x, y in ((w, 1.0), (a, _WALL), (b, 0.0)))

@@ -2,8 +2,8 @@
 
 In layer j, with s = sqrt|(a - q b) / w| and gamma = w s, the angle is theta = atan2(gamma psi, v). In an oscillating
 layer it grows by s tau; elsewhere, and across an interface, it moves by less than a quarter turn that is known in
-closed form. A sweep from the substrate gives theta_L at the lower edge of every layer, one from the cover theta_R at the
-upper edge, and for every oscillating layer
+closed form. A sweep from the substrate gives theta_L at the lower edge of every layer, one from the cover theta_R at
+the upper edge, and for every oscillating layer
 
     F = theta_L + s tau + theta_R - (m + 1) pi
 

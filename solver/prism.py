@@ -1,8 +1,8 @@
 """Prism coupling: the angle at the entrance face and the effective index it selects.
 
-N = n_p sin(A + asin(sin theta / n_p)), theta on the entrance face from its normal, A the angle between entrance face and
-base (R. Ulrich and R. Torge, Appl. Opt. 12, 2901, 1973, doi 10.1364/AO.12.002901). Indices are relative to the medium in
-front of the entrance face.
+N = n_p sin(A + asin(sin theta / n_p)), theta on the entrance face from its normal, A the angle between entrance face
+and base (R. Ulrich and R. Torge, Appl. Opt. 12, 2901, 1973, doi 10.1364/AO.12.002901). Indices are relative to the
+medium in front of the entrance face.
 """
 
 from __future__ import annotations

@@ -35,8 +35,9 @@ def mode_count(
     """Number of guided modes.
 
     n: (..., L) indices from the substrate up; t_um: (..., L-2) thicknesses in µm; wavelength_um: (...), vacuum, if n is
-    absolute; tm: False for TE, True for TM, or an array of both; n_normal: (..., L) indices along the normal where layers are
-    uniaxial. All broadcast. Returns integers of the broadcast shape. Raises ValueError for bad shapes or signs.
+    absolute; tm: False for TE, True for TM, or an array of both; n_normal: (..., L) indices along the normal where
+    layers are uniaxial. All broadcast. Returns integers of the broadcast shape. Raises ValueError for bad shapes or
+    signs.
     """
     n_, t, lam = check_stack(n, t_um, wavelength_um)
     shape = batch_shape(n_, t, lam, tm, *_normal_shape(n_normal))
@@ -62,8 +63,8 @@ def mode_index(
     if n_.shape[-1] == 3:
         flat = [np.broadcast_to(x, (*shape, k)).reshape(-1, k) for x, k in ((n_, 3), (t, 1))]
         normal = None if n_normal is None else np.broadcast_to(n_normal, (*shape, 3)).reshape(-1, 3)
-        rest = (np.broadcast_to(x, shape).reshape(-1) for x in (lam, tm))
-        return three_layer_index(flat[0], normal, flat[1], *rest, flat_m).reshape(shape)
+        wave, is_tm = (np.broadcast_to(x, shape).reshape(-1) for x in (lam, np.asarray(tm)))
+        return three_layer_index(flat[0], normal, flat[1], wave, is_tm, flat_m).reshape(shape)
     return np.sqrt(_roots(flatten(n_, n_normal, t, lam, tm, shape), flat_m)).reshape(shape)
 
 

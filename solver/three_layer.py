@@ -1,12 +1,13 @@
 """Three-layer slab, the commonest case, on a fast path.
 
-With s the film's transverse wave number over k0 and R_i / s the ratio of the decay in half-space i to it, the condition is
+With s the film's transverse wave number over k0 and R_i / s the ratio of the decay in half-space i to it, the
+condition is
 
     F = s tau - atan(R_l / s) - atan(R_o / s) - m pi = 0,      R_i^2 = b_i - d_i s^2.
 
-Half-space l is the one that stops guiding first, at s = top. With s = top sin(phi), R_l = top sqrt(d_l) cos(phi), F is smooth
-and rising in phi right up to cut-off, its derivatives are rational in sin, cos and R, and Halley's step (third order) needs one
-arc tangent an iteration. The batch runs through in blocks that stay in the processor's cache.
+Half-space l is the one that stops guiding first, at s = top. With s = top sin(phi), R_l = top sqrt(d_l) cos(phi), F
+is smooth and rising in phi right up to cut-off, its derivatives are rational in sin, cos and R, and Halley's step
+(third order) needs one arc tangent an iteration. The batch runs through in blocks that stay in the processor's cache.
 """
 
 from __future__ import annotations
@@ -119,7 +120,8 @@ def _half_space(layers: Layers, over: Array, i: int) -> tuple[Array, Array]:
 
 def _solve(e: _Edge, excess: Array) -> tuple[Array, NDArray[np.bool_]]:
     """s of the mode after a fixed number of free steps, and whether they were enough."""
-    # F runs from -(m + 1) pi at phi = 0 to `excess` at cut-off, as a sine where the film is thick, as phi where it is thin.
+    # F runs from -(m + 1) pi at phi = 0 to `excess` at cut-off, as a sine where the film is thick, as phi where it is
+    # thin.
     x = (e.mpi + np.pi) / (excess + e.mpi + np.pi)
     strong = e.top * e.tau
     x2 = x * x

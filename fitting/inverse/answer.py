@@ -8,8 +8,7 @@ from dataclasses import dataclass
 import numpy as np
 
 from ..flags import flag
-from ..observables.film import IntArray
-from ..records import FitQuality, FittedReading, Flag, Rival, SiteResult, Status
+from ..records import FitQuality, FittedReading, Flag, IntArray, Rival, SiteResult, Status
 from .assignment import Assignment
 from .descent import Prior
 from .estimates import SiteNumbers, numbers
@@ -62,8 +61,8 @@ def answer(problem: SiteProblem, settled: Settled, prior: Prior, shared: Shared)
         flags.append(flag("at_window_edge", f"The 95 % interval of {' and '.join(cut)} reaches the window's end."))
     if any(s.profile for s in spans.values()):
         notes.append(flag("not_parabolic"))
-    found = numbers(problem, fit, shared, spans, withheld, enlarge)
-    if blocked or not any(e.origin != "known" for e in found.estimates):
+    found: SiteNumbers | None = numbers(problem, fit, shared, spans, withheld, enlarge)
+    if blocked or found is None or not any(e.origin != "known" for e in found.estimates):
         found, status = None, Status.FAILED
     else:
         status = Status.FLAGGED if flags else Status.OK

@@ -15,16 +15,17 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from ..observables.film import FilmReadings, IntArray
+from ..observables.film import FilmReadings
 from ..observables.parameters import Layout
-from ..records import Array
+from ..records import Array, BoolArray, IntArray
 from . import candidates as cand
 from .descent import Descent, Prior, descend
 
 STRAY_SHARE = 0.02
 SKIP_PRICE = 2 * np.log(1 / 0.03)
 STOP_PRICE = 2 * np.log(1 / 0.30)
-# A labelled sheet is believed unless other orders are this much better: e^-10 against one sheet in a hundred mislabelled.
+# A labelled sheet is believed unless other orders are this much better: e^-10 against one sheet in a hundred
+# mislabelled.
 LABEL_PRICE = 20.0
 # Assignments this much dearer than the best weigh less than 1e-6 together and are not kept.
 FAR = 40.0
@@ -49,21 +50,33 @@ def stray_price(data: FilmReadings) -> Array:
 
 
 def rank(layout: Layout, data: FilmReadings, label: IntArray, prior: Prior) -> list[Assignment]:
-    """Distinct assignments of one site (S = 1), cheapest first, with probabilities; empty if no film fits two readings."""
+    """Distinct assignments of one site (S = 1), cheapest first, with probabilities; empty if no film fits two
+    readings."""
     found = cand.find(layout, data, label)
     if not len(found):
         return []
     sc = cand.scene(layout, data, label)
     orders, theta = found.orders[:_REFINE], found.theta[:_REFINE]
     for _ in range(2):
-        fit = descend(layout, data, orders, theta, prior, max_steps=12, tolerance=1e-3)
-        again, _score = cand.assign(sc, fit.theta)
-        theta = fit.theta
+        fit = descend(layout, data, orders, theta, prior, max_steps=6, tolerance=1e-2)
+        keep = _hopeful(data, orders, fit)
+        orders, theta = orders[keep], fit.theta[keep]
+        again, _score = cand.assign(sc, theta)
         if np.array_equal(again, orders):
             break
-        orders = again
+        orders, first = np.unique(again, axis=0, return_index=True)
+        theta = theta[first]
     orders, fit = _drop_strays(layout, data, orders, theta, prior)
     return _priced(sc, data, orders, fit)
+
+
+def _hopeful(data: FilmReadings, orders: IntArray, fit: Descent) -> IntArray:
+    """Assignments that could still come within reach of the best, were every bad reading of theirs a stray."""
+    price = stray_price(data)
+    used = orders >= 0
+    hope = np.where(used, np.minimum(fit.linear.residual**2, price), price).sum(axis=1)
+    # A gross error drags good readings along: allow one price on top before giving an assignment up.
+    return np.flatnonzero(hope <= hope.min() + FAR + price.max())
 
 
 def _drop_strays(
@@ -86,7 +99,7 @@ def _drop_strays(
 
 def _worst_out(
     layout: Layout, data: FilmReadings, orders: IntArray, fit: Descent, prior: Prior, excess: Array
-) -> np.ndarray:
+) -> BoolArray:
     """For each assignment the one reading (mask (A, R)) whose leaving lowers the price most, where any does.
 
     A gross error drags the fit along, so the largest residual need not be the wrong reading: every single one is tried.
@@ -107,7 +120,7 @@ def _worst_out(
     return gone
 
 
-def _priced(sc: cand._Scene, data: FilmReadings, orders: IntArray, fit: Descent) -> list[Assignment]:
+def _priced(sc: cand.Scene, data: FilmReadings, orders: IntArray, fit: Descent) -> list[Assignment]:
     unseen = cand.unseen_modes(sc, fit.theta, orders)
     price = fit.cost + ((orders < 0) * stray_price(data)).sum(axis=1)
     price = price + SKIP_PRICE * unseen[:, 0] + STOP_PRICE * unseen[:, 1]

@@ -15,13 +15,12 @@ from __future__ import annotations
 from dataclasses import dataclass
 
 import numpy as np
-
 from layerlot.solver.film_phase import film_phase
 from layerlot.solver.slab import mode_count
 
 from ..observables.film import FilmReadings, nominal_index
 from ..observables.parameters import Layout
-from ..records import Array
+from ..records import Array, BoolArray, IntArray
 
 # A reading within this distance of a whole order may be that mode: noise and prism errors stay well below it.
 NEAR_ORDER = 0.25
@@ -38,7 +37,7 @@ _MOST_ORDERS = 60
 class Candidates:
     """Assignments (A, R), -1 for a stray, and start values (A, P), best first; `count_limit`: orders looked at."""
 
-    orders: Array
+    orders: IntArray
     theta: Array
 
     def __len__(self) -> int:
@@ -46,23 +45,23 @@ class Candidates:
 
 
 @dataclass(frozen=True)
-class _Scene:
+class Scene:
     """One site's readings seen as effective indices. label: order or -1. group: readings that share one film index."""
 
     layout: Layout
     N: Array
     u: Array
-    context: Array
-    tm: Array
+    context: IntArray
+    tm: BoolArray
     wave: Array
-    label: Array
+    label: IntArray
 
 
-def scene(layout: Layout, readings: FilmReadings, label: Array) -> _Scene:
+def scene(layout: Layout, readings: FilmReadings, label: IntArray) -> Scene:
     N, per = nominal_index(layout, readings)
     c = readings.context[0]
     tm = layout.tm[c]
-    return _Scene(layout, N[0], (per * readings.u)[0], c, tm, layout.working_um[c], label)
+    return Scene(layout, N[0], (per * readings.u)[0], c, tm, layout.working_um[c], label)
 
 
 def unknown_film(layout: Layout) -> int | None:
@@ -80,7 +79,7 @@ def _moves(layout: Layout, layer: int, parameter: int) -> bool:
     return bool(layout.n_map[:, layer, parameter].any() or layout.normal_map[:, layer, parameter].any())
 
 
-def find(layout: Layout, readings: FilmReadings, label: Array) -> Candidates:
+def find(layout: Layout, readings: FilmReadings, label: IntArray) -> Candidates:
     """Order assignments of one site (readings with S = 1); label (R): stated order, -1 where blank."""
     sc = scene(layout, readings, label)
     film = unknown_film(layout)
@@ -94,8 +93,9 @@ def find(layout: Layout, readings: FilmReadings, label: Array) -> Candidates:
     return Candidates(orders[keep], theta[keep])
 
 
-def continuous_order(sc: _Scene, theta: Array) -> Array:
-    """Order of each reading as a real number, for films theta (T, P): shape (T, R); NaN where no film layer oscillates."""
+def continuous_order(sc: Scene, theta: Array) -> Array:
+    """Order of each reading as a real number, for films theta (T, P): shape (T, R); NaN where no film layer
+    oscillates."""
     lay = sc.layout
     n = lay.n_fixed[sc.context] + np.einsum("rlp,tp->trl", lay.n_map[sc.context], theta)
     normal = None
@@ -107,7 +107,7 @@ def continuous_order(sc: _Scene, theta: Array) -> Array:
     return np.asarray((phase.alpha + phase.k_per_um * t[..., film - 1]) / np.pi - 1)
 
 
-def assign(sc: _Scene, theta: Array) -> tuple[Array, Array]:
+def assign(sc: Scene, theta: Array) -> tuple[IntArray, Array]:
     """Nearest orders (T, R), -1 for strays, and a robust score (T) with a price for strays and for skipped orders."""
     mu = continuous_order(sc, theta)
     nearest = np.where(sc.label >= 0, sc.label, np.maximum(np.round(mu), 0))
@@ -126,8 +126,9 @@ def assign(sc: _Scene, theta: Array) -> tuple[Array, Array]:
     return order, gap.sum(axis=1)
 
 
-def _one_reading_an_order(sc: _Scene, channel: Array, order: Array, off: Array, gap: Array) -> None:
-    """Two distinct readings cannot be one mode: the farther becomes a stray. Repeats within their noise may share it."""
+def _one_reading_an_order(sc: Scene, channel: IntArray, order: IntArray, off: Array, gap: Array) -> None:
+    """Two distinct readings cannot be one mode: the farther becomes a stray. Repeats within their noise may share
+    it."""
     for a in range(channel.size):
         for b in range(a + 1, channel.size):
             i, j = channel[a], channel[b]
@@ -140,7 +141,7 @@ def _one_reading_an_order(sc: _Scene, channel: Array, order: Array, off: Array, 
                 gap[lose, k] = STRAY_SCORE
 
 
-def _scan(sc: _Scene) -> Array:
+def _scan(sc: Scene) -> Array:
     """Low-discrepancy points over the windows of everything fitted; the rest at its start."""
     from scipy.stats import qmc
 
@@ -160,15 +161,16 @@ def _scan(sc: _Scene) -> Array:
 class _Group:
     """Readings that see one film index, and their phase on a grid of that index: alpha and k, (R, K)."""
 
-    members: Array
+    members: IntArray
     index: Array
     alpha: Array
     k: Array
     window: tuple[float, float]
 
 
-def _from_pairs(sc: _Scene, film: int) -> Array:
-    """Films (T, P) that make some pair of readings modes of assumed orders, the other indices matched to that thickness."""
+def _from_pairs(sc: Scene, film: int) -> Array:
+    """Films (T, P) that make some pair of readings modes of assumed orders, the other indices matched to that
+    thickness."""
     lay = sc.layout
     t_low, t_high = _thickness_window(lay, film)
     groups = [_group(sc, film, g) for g in _grouping(sc, film)]
@@ -197,13 +199,13 @@ def _thickness_window(lay: Layout, film: int) -> tuple[float, float]:
     return float(low[i[0]]), float(high[i[0]])
 
 
-def _grouping(sc: _Scene, film: int) -> list[Array]:
+def _grouping(sc: Scene, film: int) -> list[IntArray]:
     split_pol = sc.layout.uniaxial
     keys = [(w, bool(p) and split_pol) for w, p in zip(sc.wave, sc.tm)]
     return [np.array([i for i, k in enumerate(keys) if k == key]) for key in sorted(set(keys))]
 
 
-def _group(sc: _Scene, film: int, members: Array) -> _Group:
+def _group(sc: Scene, film: int, members: IntArray) -> _Group:
     lay = sc.layout
     low, high = lay.bounds()
     c = sc.context[members]
@@ -226,7 +228,7 @@ def _group(sc: _Scene, film: int, members: Array) -> _Group:
     return _Group(members, grid, phase.alpha, phase.k_per_um, (n_low, n_high))
 
 
-def _orders_of(sc: _Scene, g: _Group, i: int, t_high: float) -> Array:
+def _orders_of(sc: Scene, g: _Group, i: int, t_high: float) -> Array:
     if sc.label[g.members[i]] >= 0:
         return np.array([sc.label[g.members[i]]], dtype=float)
     top = np.nanmax((g.alpha[i] + g.k[i] * t_high) / np.pi - 1) if np.isfinite(g.alpha[i]).any() else -1
@@ -239,7 +241,7 @@ def _curves(g: _Group, i: int, orders: Array) -> Array:
         return np.asarray(((orders[:, None] + 1) * np.pi - g.alpha[i]) / g.k[i])
 
 
-def _group_thickness(sc: _Scene, g: _Group, t_low: float, t_high: float) -> Array:
+def _group_thickness(sc: Scene, g: _Group, t_low: float, t_high: float) -> Array:
     """Thicknesses at which two readings of the group, with assumed orders, agree on the index; best-scoring kept."""
     points: list[Array] = []
     slack = 1e-6 + 0.02 * (t_high - t_low)
@@ -266,12 +268,12 @@ def _group_thickness(sc: _Scene, g: _Group, t_low: float, t_high: float) -> Arra
     return np.asarray(p[np.argsort(score, kind="stable")[:_KEEP], 0])
 
 
-def _single_index(sc: _Scene, g: _Group, t_low: float, t_high: float) -> Array:
+def _single_index(sc: Scene, g: _Group, t_low: float, t_high: float) -> Array:
     t = np.concatenate([_curves(g, i, _orders_of(sc, g, i, t_high)).ravel() for i in range(g.members.size)])
     return np.asarray(t[(t > t_low) & (t < t_high)])
 
 
-def _pairs(sc: _Scene, g: _Group) -> list[tuple[int, int]]:
+def _pairs(sc: Scene, g: _Group) -> list[tuple[int, int]]:
     """Pairs that pin the film well: far apart in one polarisation first, then across polarisations; ten at most."""
     size = g.members.size
     all_pairs = [(i, j) for i in range(size) for j in range(i + 1, size)]
@@ -286,7 +288,7 @@ def _pairs(sc: _Scene, g: _Group) -> list[tuple[int, int]]:
     return spread + cross[: max(2, 4 - len(spread))]
 
 
-def _scores(sc: _Scene, g: _Group, points: Array) -> Array:
+def _scores(sc: Scene, g: _Group, points: Array) -> Array:
     """Robust score of points (T, 2) = (t, n) against all readings of the group, by interpolation on its grid."""
     total = np.zeros(points.shape[0])
     for i in range(g.members.size):
@@ -301,7 +303,7 @@ def _scores(sc: _Scene, g: _Group, points: Array) -> Array:
     return total
 
 
-def _score_at(sc: _Scene, g: _Group, t: float, n: float) -> float:
+def _score_at(sc: Scene, g: _Group, t: float, n: float) -> float:
     return float(_scores(sc, g, np.array([[t, n]]))[0])
 
 
@@ -312,7 +314,7 @@ def _spread_out(t: Array) -> Array:
     return np.asarray(ordered[keep])
 
 
-def _best_index(sc: _Scene, g: _Group, t: Array) -> Array:
+def _best_index(sc: Scene, g: _Group, t: Array) -> Array:
     """Film index (T) of a group that suits its readings best at given thicknesses."""
     with np.errstate(invalid="ignore"):
         mu = (g.alpha[None] + g.k[None] * t[:, None, None]) / np.pi - 1
@@ -324,7 +326,7 @@ def _best_index(sc: _Scene, g: _Group, t: Array) -> Array:
     return np.asarray(g.index[cost.sum(axis=1).argmin(axis=1)])
 
 
-def _set_index(lay: Layout, film: int, sc: _Scene, g: _Group, theta: Array, n: Array) -> None:
+def _set_index(lay: Layout, film: int, sc: Scene, g: _Group, theta: Array, n: Array) -> None:
     """Put an index into the unknowns that carry it (least squares where a curve has several coefficients)."""
     tm_only = bool(sc.tm[g.members].all()) and lay.uniaxial
     maps, fixed = (lay.normal_map, lay.normal_fixed) if tm_only else (lay.n_map, lay.n_fixed)
@@ -336,9 +338,9 @@ def _set_index(lay: Layout, film: int, sc: _Scene, g: _Group, theta: Array, n: A
     theta += np.outer(n - now, row) / (row @ row)
 
 
-def unseen_modes(sc: _Scene, theta: Array, orders: Array) -> Array:
-    """For each assignment (A): how many orders below a channel's highest used one have no reading, and whether modes beyond it
-    exist that could have been read. Returns (A, 2)."""
+def unseen_modes(sc: Scene, theta: Array, orders: IntArray) -> Array:
+    """For each assignment (A): how many orders below a channel's highest used one have no reading, and whether modes
+    beyond it exist that could have been read. Returns (A, 2)."""
     lay = sc.layout
     out = np.zeros((theta.shape[0], 2))
     for a in range(theta.shape[0]):

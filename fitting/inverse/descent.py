@@ -1,7 +1,7 @@
 """Damped Gauss-Newton for many small film problems at once: S sites or S rival assignments, the same unknowns in each.
 
-Used where a batch pays: ranking assignments, conditional minima of a profile, the joint step over a table. The final fit of a
-site is lmfit's (see `lmfit_step`).
+Used where a batch pays: ranking assignments, conditional minima of a profile, the joint step over a table. The final
+fit of a site is lmfit's (see `lmfit_step`).
 """
 
 from __future__ import annotations
@@ -10,9 +10,9 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from ..observables.film import FilmReadings, IntArray, predict
+from ..observables.film import FilmReadings, predict
 from ..observables.parameters import Layout
-from ..records import Array
+from ..records import Array, BoolArray, IntArray
 
 # Added to the residual of a reading whose mode does not exist there, in units of its u: a wall, not a slope.
 ABSENT = 30.0
@@ -20,7 +20,8 @@ ABSENT = 30.0
 
 @dataclass(frozen=True)
 class Prior:
-    """Gaussian prior on the unknowns: mean (P) or (S, P), precision (P, P) or (S, P, P); zero rows where there is none."""
+    """Gaussian prior on the unknowns: mean (P) or (S, P), precision (P, P) or (S, P, P); zero rows where there is
+    none."""
 
     mean: Array
     precision: Array
@@ -47,7 +48,7 @@ class Linear:
 
     residual: Array
     jacobian: Array
-    exists: Array
+    exists: BoolArray
     predicted: Array
 
     @property
@@ -70,7 +71,7 @@ class Descent:
     theta: Array  # (S, P)
     cost: Array  # (S,) chi2 of readings and priors
     linear: Linear
-    converged: Array  # (S,)
+    converged: BoolArray  # (S,)
 
 
 def descend(
@@ -80,7 +81,7 @@ def descend(
     theta: Array,
     prior: Prior,
     *,
-    free: Array | None = None,
+    free: BoolArray | None = None,
     max_steps: int = 30,
     tolerance: float = 1e-6,
 ) -> Descent:
@@ -102,7 +103,7 @@ def descend(
         new_cost = new.chi2 + prior.cost(trial)
         better = new_cost <= cost
         theta = np.where(better[:, None], trial, theta)
-        lin = Linear(*(np.where(better[(...,) + (None,) * (a.ndim - 1)], a, b) for a, b in _pairs(new, lin)))
+        lin = _pick(better, new, lin)
         cost = np.where(better, new_cost, cost)
         converged |= gain < tolerance
         if converged.all():
@@ -112,12 +113,18 @@ def descend(
     return Descent(theta, cost, lin, converged)
 
 
-def _pairs(a: Linear, b: Linear) -> list[tuple[Array, Array]]:
-    return [(a.residual, b.residual), (a.jacobian, b.jacobian), (a.exists, b.exists), (a.predicted, b.predicted)]
+def _pick(better: BoolArray, new: Linear, old: Linear) -> Linear:
+    row = better[:, None]
+    return Linear(
+        np.where(row, new.residual, old.residual),
+        np.where(row[..., None], new.jacobian, old.jacobian),
+        np.where(row, new.exists, old.exists),
+        np.where(row, new.predicted, old.predicted),
+    )
 
 
 def _step(
-    lin: Linear, prior: Prior, theta: Array, free: Array, damping: Array, low: Array, high: Array
+    lin: Linear, prior: Prior, theta: Array, free: BoolArray, damping: Array, low: Array, high: Array
 ) -> tuple[Array, Array]:
     """Damped step and the fall of the cost that the undamped model expects of it."""
     grad = np.einsum("srp,sr->sp", lin.jacobian, lin.residual)

@@ -7,7 +7,7 @@ from dataclasses import dataclass
 import numpy as np
 
 from ..observables.parameters import Layout, Parameter
-from ..records import Array, BudgetLine, Estimate
+from ..records import Array, BoolArray, BudgetLine, Estimate
 from .final import SiteFit, shared_gain
 from .intervals import REACH, Interval
 from .joint import Shared, columns
@@ -30,8 +30,8 @@ class Output:
 
 @dataclass(frozen=True)
 class SiteNumbers:
-    """Estimates with their correlation; rows of sensitivity to the table's shared unknowns (E, Q), signed shares of known
-    quantities of the site's own stack by name (E each)."""
+    """Estimates with their correlation; rows of sensitivity to the table's shared unknowns (E, Q), signed shares of
+    known quantities of the site's own stack by name (E each)."""
 
     estimates: tuple[Estimate, ...]
     correlation: Array
@@ -40,7 +40,7 @@ class SiteNumbers:
     to_known: dict[str, Array]
 
 
-def outputs(layout: Layout, withheld: Array) -> list[Output]:
+def outputs(layout: Layout, withheld: BoolArray) -> list[Output]:
     """Numbers of a site, fitted unknowns first; those that a loose direction touches are left out."""
     count = len(layout.parameters)
     out = []
@@ -63,7 +63,7 @@ def outputs(layout: Layout, withheld: Array) -> list[Output]:
 
 
 def numbers(
-    problem: SiteProblem, fit: SiteFit, shared: Shared, spans: dict[int, Interval], withheld: Array, enlarge: float
+    problem: SiteProblem, fit: SiteFit, shared: Shared, spans: dict[int, Interval], withheld: BoolArray, enlarge: float
 ) -> SiteNumbers:
     """Estimates of one site. enlarge: factor on the random part (1 unless the fit is poor)."""
     layout = problem.layout
@@ -122,8 +122,8 @@ def _follow(layout: Layout, fit: SiteFit, shared: Shared, rows: Array) -> tuple[
 def _budget(
     outs: list[Output], fit: SiteFit, shared: Shared, random: Array, to_shared: Array, to_known: dict[str, Array]
 ) -> tuple[BudgetLine, ...]:
-    """Shares whose squares add up to u²: reading noise, each stated prior, and what the table's readings left in the shared
-    quantities while they calibrated them."""
+    """Shares whose squares add up to u²: reading noise, each stated prior, and what the table's readings left in the
+    shared quantities while they calibrated them."""
     cov = shared.covariance
     lines = []
     labels = {p.name: p.label for p in shared.parameters}

@@ -6,8 +6,7 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from ..observables.film import IntArray
-from ..records import Array
+from ..records import Array, BoolArray, IntArray
 from .descent import Linear, Prior, linearise
 from .lmfit_step import Solution, minimise
 from .problem import SiteProblem
@@ -15,8 +14,8 @@ from .problem import SiteProblem
 
 @dataclass(frozen=True)
 class SiteFit:
-    """Best unknowns (P), covariance (P, P) with the shared unknowns as the whole table leaves them, the random part of the
-    covariance, and the prior used. chi2 and dof count readings and priors; jacobian (R, P) is divided by u."""
+    """Best unknowns (P), covariance (P, P) with the shared unknowns as the whole table leaves them, the random part
+    of the covariance, and the prior used. chi2 and dof count readings and priors; jacobian (R, P) is divided by u."""
 
     theta: Array
     covariance: Array
@@ -25,8 +24,8 @@ class SiteFit:
     dof: int
     jacobian: Array
     predicted: Array
-    exists: Array
-    at_edge: Array
+    exists: BoolArray
+    at_edge: BoolArray
     success: bool
     prior: Prior
 
@@ -97,35 +96,34 @@ def _split(problem: SiteProblem, orders: IntArray, s: Solution, lin: Linear, pri
 
 
 def covariances(
-    jac: Array, precision: Array, local: Array, fitted: Array, bounds: tuple[Array, Array]
+    jac: Array, precision: Array, local: BoolArray, fitted: BoolArray, bounds: tuple[Array, Array]
 ) -> tuple[Array, Array]:
     """Covariance (P, P) and its random part. jac (R, P) divided by u; precision of the priors; local: not shared.
 
-    Random is what this site's reading noise does with the shared unknowns held; the rest, the shared unknowns and the known
-    thicknesses of the stack, is common to the sites. A fitted unknown that nothing determines counts as spread evenly
-    over its window, so that the matrix exists; the rank test keeps such a number from being written.
+    Random is what this site's reading noise does with the shared unknowns held; the rest, the shared unknowns and the
+    known thicknesses of the stack, is common to the sites. A fitted unknown that nothing determines counts as spread
+    evenly over its window, so that the matrix exists; the rank test keeps such a number from being written.
     """
     width = bounds[1] - bounds[0]
     even = np.diag(np.where(fitted & np.isfinite(width), 12 / width**2, 0.0))
     data = jac.T @ jac
     information = data + precision + even * 1e-6
     try:
-        covariance = np.linalg.inv(information)
+        covariance = np.asarray(np.linalg.inv(information), dtype=float)
     except np.linalg.LinAlgError:
-        covariance = np.linalg.inv(data + precision + even)
+        covariance = np.asarray(np.linalg.inv(data + precision + even), dtype=float)
     a = np.flatnonzero(local)
     random = np.zeros_like(covariance)
     if a.size:
-        held = np.linalg.inv(information[np.ix_(a, a)])
+        held: Array = np.asarray(np.linalg.inv(information[np.ix_(a, a)]))
         random[np.ix_(a, a)] = held @ data[np.ix_(a, a)] @ held
     return covariance, random
 
 
-def shared_gain(fit: SiteFit, local: Array) -> Array:
+def shared_gain(fit: SiteFit, local: BoolArray) -> Array:
     """How the local unknowns follow the shared ones: d(local)/d(shared), (local, shared)."""
     information = fit.jacobian.T @ fit.jacobian + fit.prior.precision
     a, b = np.flatnonzero(local), np.flatnonzero(~local)
     if not a.size or not b.size:
         return np.zeros((a.size, b.size))
-    gain: Array = -np.linalg.solve(information[np.ix_(a, a)], information[np.ix_(a, b)])
-    return gain
+    return np.asarray(-np.linalg.solve(information[np.ix_(a, a)], information[np.ix_(a, b)]), dtype=float)

@@ -1,4 +1,5 @@
-"""What the readings cannot say: directions in the space of the unknowns that the data leave as wide as the fit windows."""
+"""What the readings cannot say: directions in the space of the unknowns that the data leave as wide as the fit
+windows."""
 
 from __future__ import annotations
 
@@ -7,7 +8,7 @@ from dataclasses import dataclass
 import numpy as np
 
 from ..observables.parameters import Layout, Parameter
-from ..records import Array
+from ..records import Array, BoolArray
 from .descent import Prior
 from .problem import SiteProblem
 
@@ -22,7 +23,7 @@ class Rank:
     """Loose directions over the fitted unknowns, and for each unknown (P) whether one of them touches it."""
 
     directions: tuple[Array, ...]
-    touched: Array
+    touched: BoolArray
     condition: float
 
 

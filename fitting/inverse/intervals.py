@@ -1,8 +1,8 @@
 """95 % intervals from the likelihood: the parabola where it holds, the profile where it does not.
 
-Each unknown is held at trial values while the others, shared ones included, find their conditional best; the interval ends where the
-cost has risen by 3.841, the 95 % point of chi-squared with one degree of freedom (D. J. Venzon and S. H. Moolgavkar,
-Applied Statistics 37, 87, 1988).
+Each unknown is held at trial values while the others, shared ones included, find their conditional best; the interval
+ends where the cost has risen by 3.841, the 95 % point of chi-squared with one degree of freedom (D. J. Venzon and S.
+H. Moolgavkar, Applied Statistics 37, 87, 1988).
 """
 
 from __future__ import annotations
@@ -11,8 +11,7 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from ..observables.film import IntArray
-from ..records import Array
+from ..records import Array, BoolArray, IntArray
 from .descent import Prior, descend, linearise
 from .final import SiteFit
 from .problem import SiteProblem
@@ -32,7 +31,7 @@ class Interval:
     cut: bool  # the window ends before the likelihood has fallen
 
 
-def intervals(problem: SiteProblem, orders: IntArray, fit: SiteFit, which: Array) -> dict[int, Interval]:
+def intervals(problem: SiteProblem, orders: IntArray, fit: SiteFit, which: IntArray) -> dict[int, Interval]:
     """Interval of each unknown listed in `which`, in working units."""
     if not which.size:
         return {}
@@ -56,15 +55,16 @@ def intervals(problem: SiteProblem, orders: IntArray, fit: SiteFit, which: Array
     }
 
 
-def _ends(x: Array, target: Array, p: int) -> tuple[float, float]:
+def _ends(x: Array, target: IntArray, p: int) -> tuple[float, float]:
     low, high = x[target == p]
     return float(low), float(high)
 
 
 def _conditional(
-    problem: SiteProblem, orders: IntArray, fit: SiteFit, prior: Prior, target: Array, x: Array, theta: Array
+    problem: SiteProblem, orders: IntArray, fit: SiteFit, prior: Prior, target: IntArray, x: Array, theta: Array
 ) -> tuple[Array, Array]:
-    """Rise of the cost with unknown `target` (K) held at x (K) and the rest at their conditional best; and where that is."""
+    """Rise of the cost with unknown `target` (K) held at x (K) and the rest at their conditional best; and where that
+    is."""
     layout = problem.layout
     rows = np.arange(target.size)
     low, high = layout.bounds()
@@ -86,7 +86,7 @@ def _conditional(
 
 
 def _search(
-    problem: SiteProblem, orders: IntArray, fit: SiteFit, target: Array, x: Array, rise: Array, theta: Array
+    problem: SiteProblem, orders: IntArray, fit: SiteFit, target: IntArray, x: Array, rise: Array, theta: Array
 ) -> tuple[Array, Array]:
     """Move each end until the rise is 3.84 to 1 %: a secant on the root of the rise, which is near straight."""
     low, high = (b[target] for b in problem.layout.bounds())
@@ -109,5 +109,5 @@ def _search(
     return x, rise
 
 
-def _at_window(x: Array, low: Array, high: Array) -> Array:
+def _at_window(x: Array, low: Array, high: Array) -> BoolArray:
     return np.asarray((x == low) | (x == high))

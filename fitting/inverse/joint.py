@@ -1,8 +1,8 @@
 """The shared unknowns of a table (prism, base angle, table zero, constants) from all its good sites together.
 
-Each site, its own unknowns minimised out, adds information and a gradient on the shared ones; the sum with the priors gives
-their joint best and covariance (the arrow-shaped normal equations, solved exactly). A site's own fit then takes as prior what all
-the others and the stated priors say: nothing is counted twice, and nothing shared is averaged away.
+Each site, its own unknowns minimised out, adds information and a gradient on the shared ones; the sum with the priors
+gives their joint best and covariance (the arrow-shaped normal equations, solved exactly). A site's own fit then takes
+as prior what all the others and the stated priors say: nothing is counted twice, and nothing shared is averaged away.
 """
 
 from __future__ import annotations
@@ -12,9 +12,9 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from ..observables.film import IntArray
+from ..observables.film import FilmReadings
 from ..observables.parameters import Layout, Parameter
-from ..records import Array
+from ..records import Array, IntArray
 from .descent import Prior, linearise
 from .problem import SiteProblem, stack_sites
 
@@ -23,8 +23,8 @@ _STEPS = 8
 
 @dataclass(frozen=True)
 class Shared:
-    """Joint best (Q) and information (Q, Q) of the shared unknowns; each site's part of the information, its gradient, and its
-    local unknowns at the joint best."""
+    """Joint best (Q) and information (Q, Q) of the shared unknowns; each site's part of the information, its
+    gradient, and its local unknowns at the joint best."""
 
     parameters: tuple[Parameter, ...]
     best: Array
@@ -35,8 +35,7 @@ class Shared:
 
     @property
     def covariance(self) -> Array:
-        inverse: Array = np.linalg.inv(self.information) if self.best.size else np.zeros((0, 0))
-        return inverse
+        return np.asarray(np.linalg.inv(self.information), dtype=float) if self.best.size else np.zeros((0, 0))
 
     def without(self, site: int) -> tuple[Array, Array]:
         """Mean and information of the shared unknowns from the priors and all sites but this one."""
@@ -57,7 +56,7 @@ def shared_parameters(problems: Sequence[SiteProblem]) -> tuple[Parameter, ...]:
     return tuple(seen.values())
 
 
-def columns(layout: Layout, parameters: Sequence[Parameter]) -> tuple[Array, Array]:
+def columns(layout: Layout, parameters: Sequence[Parameter]) -> tuple[IntArray, IntArray]:
     """Positions of the layout's shared unknowns, and of each of them among the table's."""
     names = [p.name for p in parameters]
     mine = np.flatnonzero(layout.shared)
@@ -78,7 +77,8 @@ def solve_shared(
     parts: dict[int, tuple[Array, Array]] = {}
     information = prior
     for _ in range(_STEPS if parameters else 0):
-        parts, moves = {}, {}
+        parts = {}
+        moves: dict[int, tuple[Array, Array]] = {}
         for members, batch in batches:
             _site_parts(problems, members, batch, parameters, best, local, parts, moves)
         information = prior + sum(h for h, _ in parts.values())
@@ -96,7 +96,7 @@ def solve_shared(
     )
 
 
-Batch = tuple[object, IntArray]
+Batch = tuple[FilmReadings, IntArray]
 
 
 def _batches(
@@ -130,7 +130,7 @@ def _site_parts(
     low, high = layout.bounds()
     theta[:, own] = np.clip(theta[:, own], low[own], high[own])
     data, order = batch
-    lin = linearise(layout, data, theta, order)  # type: ignore[arg-type]
+    lin = linearise(layout, data, theta, order)
     own_prior = Prior.of(layout)
     hess = np.einsum("srp,srq->spq", lin.jacobian, lin.jacobian)
     grad = np.einsum("srp,sr->sp", lin.jacobian, lin.residual)

@@ -7,7 +7,7 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from ..records import Array
+from ..records import Array, BoolArray
 
 # An unknown this close to its bound, as a share of the window, counts as held by it.
 EDGE = 1e-6
@@ -15,8 +15,8 @@ EDGE = 1e-6
 
 @dataclass(frozen=True)
 class Solution:
-    """Minimum of a sum of squares. covariance: inverse of J^T J at the minimum, for residuals already divided by their u
-    (scale by chi2 / dof where the noise is unknown); NaN where J^T J is singular. at_edge: held by a bound."""
+    """Minimum of a sum of squares. covariance: inverse of J^T J at the minimum, for residuals already divided by
+    their u (scale by chi2 / dof where the noise is unknown); NaN where J^T J is singular. at_edge: held by a bound."""
 
     values: Array
     covariance: Array
@@ -26,7 +26,7 @@ class Solution:
     evaluations: int
     success: bool
     message: str
-    at_edge: Array
+    at_edge: BoolArray
 
 
 def minimise(
@@ -38,7 +38,8 @@ def minimise(
     high: Array | None = None,
     tolerance: float = 1e-14,
 ) -> Solution:
-    """Least squares of residual(x) (n) with Jacobian d residual / dx (n, p), x of length p, from `start`, low <= x <= high.
+    """Least squares of residual(x) (n) with Jacobian d residual / dx (n, p), x of length p, from `start`, low <= x <=
+    high.
 
     tolerance: relative, on the fall of the sum of squares; the default asks for all that double precision gives.
     Raises ValueError if the start lies outside the bounds or a residual there is not finite.
@@ -66,7 +67,8 @@ def minimise(
     out = fitter.leastsq(Dfun=lambda p: jacobian(vector(p)), ftol=tolerance, xtol=max(1e-12, tolerance), gtol=0.0)
     x = vector(out.params)
     r, jac = residual(x), jacobian(x)
-    # MINPACK's codes 1 to 3 are convergence; 6 to 8 say that the tolerance is below what rounding allows: a minimum too.
+    # MINPACK's codes 1 to 3 are convergence; 6 to 8 say that the tolerance is below what rounding allows: a minimum
+    # too.
     success = out.ier in {1, 2, 3, 4, 6, 7, 8}
     span = np.where(np.isfinite(hi - lo), hi - lo, np.inf)
     at_edge = (x - lo <= EDGE * span) & np.isfinite(lo) | (hi - x <= EDGE * span) & np.isfinite(hi)

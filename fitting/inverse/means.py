@@ -37,8 +37,8 @@ def group_means(
 ) -> tuple[GroupMean, ...]:
     """Means over the sites of every wafer and over the wafers of every lot. covariance: of the table's shared unknowns.
 
-    trusted: False leaves a site out (failed, orders in doubt). A wafer mean's u is that of the mean of these sites as made; how far
-    the wafer varies between sites is in `spread`.
+    trusted: False leaves a site out (failed, orders in doubt). A wafer mean's u is that of the mean of these sites as
+    made; how far the wafer varies between sites is in `spread`.
     """
     out: list[GroupMean] = []
     wafers: dict[tuple[str | None, str | None], list[int]] = {}

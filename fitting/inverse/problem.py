@@ -7,9 +7,9 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from ..observables.film import FilmReadings, IntArray
+from ..observables.film import FilmReadings
 from ..observables.parameters import Context, Layout, build_layout
-from ..records import Fault, InputRefused, Place, Quantity, Reading
+from ..records import Fault, InputRefused, IntArray, Place, Quantity, Reading
 from ..stack import Stack
 
 
@@ -24,7 +24,8 @@ class SiteProblem:
 
 
 def build_problems(stack: Stack, readings: Sequence[Reading]) -> list[SiteProblem]:
-    """Group readings by lot, wafer and site, in file order. Raises InputRefused if a reading cannot be used with the stack."""
+    """Group readings by lot, wafer and site, in file order. Raises InputRefused if a reading cannot be used with the
+    stack."""
     _check(stack, readings)
     sites: dict[tuple[str | None, ...], list[Reading]] = {}
     for reading in readings:

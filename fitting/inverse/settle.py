@@ -8,8 +8,7 @@ from dataclasses import dataclass, field
 import numpy as np
 
 from ..flags import flag
-from ..observables.film import IntArray
-from ..records import Array, Flag
+from ..records import Array, Flag, IntArray
 from . import candidates as cand
 from .assignment import FAR, LABEL_PRICE, Assignment, rank, stray_price
 from .descent import Prior, descend, linearise
@@ -24,7 +23,8 @@ UNDECIDED = 0.2
 
 @dataclass
 class Settled:
-    """orders (R) and unknowns (P) of the accepted assignment, None if there is none; rivals with their price difference."""
+    """orders (R) and unknowns (P) of the accepted assignment, None if there is none; rivals with their price
+    difference."""
 
     orders: IntArray | None
     theta: Array | None
@@ -43,8 +43,8 @@ class Settled:
 def settle_all(problems: Sequence[SiteProblem]) -> list[Settled]:
     """Decide the orders of several sites with the stated priors alone.
 
-    Fully labelled sites under one layout are first tried together, as labelled, from the answer of the first of them; those in
-    which every reading fits are done. The others, and unlabelled ones, go the long way of `settle`.
+    Fully labelled sites under one layout are first tried together, as labelled, from the answer of the first of them;
+    those in which every reading fits are done. The others, and unlabelled ones, go the long way of `settle`.
     """
     out: dict[int, Settled] = {}
     groups: dict[int, list[int]] = {}
@@ -65,7 +65,7 @@ def _try_labels(problems: Sequence[SiteProblem], members: Sequence[int], hint: A
     data, orders = stack_sites(mine, [p.label for p in mine])
     fit = descend(layout, data, orders, np.tile(hint, (len(mine), 1)), Prior.of(layout), max_steps=12, tolerance=1e-5)
     low, high = layout.bounds()
-    inside = ((fit.theta > low) & (fit.theta < high)).all(axis=1) & fit.linear.exists.all(axis=1)
+    inside = np.all((fit.theta > low) & (fit.theta < high) & fit.linear.exists.all(axis=1, keepdims=True), axis=1)
     out = {}
     for k, i in enumerate(members):
         dof = problems[i].label.size - int(layout.fitted.sum())

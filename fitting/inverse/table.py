@@ -19,7 +19,7 @@ from typing import TypeVar
 import numpy as np
 
 from ..flags import flag
-from ..records import Array, Estimate, FitResult, Flag, Reading
+from ..records import Estimate, FitResult, Flag, Reading
 from ..stack import Stack, conventions
 from .answer import SiteAnswer, answer, unanswered
 from .joint import Shared, site_prior, solve_shared
@@ -46,7 +46,8 @@ def fit_table(
 ) -> FitResult:
     """Fit every site of a table. Raises InputRefused where readings and stack do not go together.
 
-    workers: processes; progress(done, total) and should_stop() are asked between chunks of sites. A stop keeps what is done.
+    workers: processes; progress(done, total) and should_stop() are asked between chunks of sites. A stop keeps what
+    is done.
     """
     problems = build_problems(stack, readings)
     total = 2 * len(problems)
@@ -62,8 +63,8 @@ def fit_table(
         shared = _joint(done, settled)
         jobs = [(p, s, site_prior(p, shared, i)) for i, (p, s) in enumerate(zip(done, settled, strict=True))]
         answers: list[SiteAnswer] = []
-        for part in pool.map(partial(_answer_chunk, shared), list(_chunks(jobs))):
-            answers += part
+        for some in pool.map(partial(_answer_chunk, shared), list(_chunks(jobs))):
+            answers += some
             _tell(progress, len(problems) + len(answers), total)
             if stop():
                 break

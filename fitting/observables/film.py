@@ -1,7 +1,7 @@
 """What the model predicts for prism-coupler readings: coupling angle or effective index of a mode of the film stack.
 
-Batched over sites (S) that share a layout, with R readings a site (padded; `valid` says which are real). Order -1 leaves a
-reading out. Predictions and the Jacobian come from one mode solve.
+Batched over sites (S) that share a layout, with R readings a site (padded; `valid` says which are real). Order -1
+leaves a reading out. Predictions and the Jacobian come from one mode solve.
 """
 
 from __future__ import annotations
@@ -10,16 +10,11 @@ from dataclasses import dataclass
 from typing import NamedTuple
 
 import numpy as np
-from numpy.typing import NDArray
-
 from layerlot.solver.film_modes import film_modes
 from layerlot.solver.prism import coupling_angle_deg, coupling_slopes
 
-from ..records import Array
+from ..records import Array, BoolArray, IntArray
 from .parameters import Layout
-
-IntArray = NDArray[np.intp]
-BoolArray = NDArray[np.bool_]
 
 
 @dataclass(frozen=True)
@@ -44,8 +39,8 @@ class FilmReadings:
 
 
 class Prediction(NamedTuple):
-    """value (S, R); jacobian (S, R, P); exists (S, R): False where the mode or its coupling angle does not exist, value and
-    jacobian then being those of the nearest light line. loss_index (S, R): imaginary part of N."""
+    """value (S, R); jacobian (S, R, P); exists (S, R): False where the mode or its coupling angle does not exist,
+    value and jacobian then being those of the nearest light line. loss_index (S, R): imaginary part of N."""
 
     value: Array
     jacobian: Array
@@ -100,7 +95,7 @@ def _read(
     capped = np.minimum(N, n_p * (1 - 1e-9))
     angle = coupling_angle_deg(capped, n_p, base)
     d = coupling_slopes(capped, n_p, base)
-    reachable = (N < n_p) & np.isfinite(angle) & np.isfinite(d.dN)
+    reachable = (n_p > N) & np.isfinite(angle) & np.isfinite(d.dN)
     sign = layout.angle_sign
     jac = sign * (d.dN[:, None] * slope + d.dn_p[:, None] * layout.prism_map[c] + d.dbase[:, None] * layout.base_map)
     jac = jac + layout.zero_map

@@ -1,7 +1,7 @@
 """The unknowns of a film fit and the linear maps from them to layer indices, thicknesses and prism constants.
 
-Every quantity of a stack file is linear in the unknowns (an index is its own unknown, a shift adds to a material's curve, a
-Cauchy curve is linear in its coefficients), so the maps are plain matrices and the chain rule is one product.
+Every quantity of a stack file is linear in the unknowns (an index is its own unknown, a shift adds to a material's
+curve, a Cauchy curve is linear in its coefficients), so the maps are plain matrices and the chain rule is one product.
 
 Working units: lengths in µm; indices relative to the stack's `index_reference`, wavelengths in that medium. The mode
 equation only knows n / wavelength, so this is exact, and estimates come out in the units that the user typed.
@@ -13,9 +13,8 @@ from collections.abc import Sequence
 from dataclasses import dataclass, field
 
 import numpy as np
-from numpy.typing import NDArray
 
-from ..records import Array
+from ..records import Array, BoolArray
 from ..stack import IndexSpec, Prism, Quantity, Stack
 
 _NO_PRIOR = float("inf")
@@ -58,14 +57,14 @@ class Context:
 class Layout:
     """Unknowns (P of them) and maps for a list of contexts (C): value = fixed + map @ unknowns.
 
-    n (C, L), n_normal (C, L), t_um (L-2), prism index (C), base angle, table zero; `working_um` (C) is the wavelength in
-    the reference medium. `curves` names derived indices: (layer, axis, wavelength_nm, row of length P, offset).
+    n (C, L), n_normal (C, L), t_um (L-2), prism index (C), base angle, table zero; `working_um` (C) is the wavelength
+    in the reference medium. `curves` names derived indices: (layer, axis, wavelength_nm, row of length P, offset).
     """
 
     parameters: tuple[Parameter, ...]
     contexts: tuple[Context, ...]
     working_um: Array
-    tm: NDArray[np.bool_]
+    tm: BoolArray
     n_fixed: Array
     n_map: Array
     normal_fixed: Array
@@ -87,11 +86,11 @@ class Layout:
         return next(i for i, p in enumerate(self.parameters) if p.name == name)
 
     @property
-    def shared(self) -> Array:
+    def shared(self) -> BoolArray:
         return np.array([p.shared for p in self.parameters], dtype=bool)
 
     @property
-    def fitted(self) -> Array:
+    def fitted(self) -> BoolArray:
         return np.array([p.fitted for p in self.parameters], dtype=bool)
 
     def bounds(self) -> tuple[Array, Array]:
@@ -185,7 +184,8 @@ def _quantity(builder: _Builder, q: Quantity, make: dict[str, object], scale_row
         assert q.value is not None
         if q.u == 0:
             return float(q.value), {}
-        # Twenty standard uncertainties: wide enough never to be felt, narrow enough to keep steps in the physical range.
+        # Twenty standard uncertainties: wide enough never to be felt, narrow enough to keep steps in the physical
+        # range.
         bounds = {"low": q.value - 20 * q.u, "high": q.value + 20 * q.u, "start": q.value}
         p = Parameter(fitted=False, prior_mean=q.value, prior_u=q.u, **bounds, **make)  # type: ignore[arg-type]
     else:
@@ -196,13 +196,21 @@ def _quantity(builder: _Builder, q: Quantity, make: dict[str, object], scale_row
 
 
 def _plain(builder: _Builder, q: Quantity, name: str, label: str, unit: str) -> Row:
-    make = {"name": name, "label": label, "layer": None, "quantity": name, "unit": unit, "scale": 1.0, "shared": True}
+    make: dict[str, object] = {
+        "name": name,
+        "label": label,
+        "layer": None,
+        "quantity": name,
+        "unit": unit,
+        "scale": 1.0,
+        "shared": True,
+    }
     return _quantity(builder, q, make)
 
 
 def _thickness(builder: _Builder, layer: str, q: Quantity | None) -> Row:
     assert q is not None, f"layer {layer} has no thickness"
-    make = {
+    make: dict[str, object] = {
         "name": f"thickness:{layer}", "label": f"thickness of {layer}", "layer": layer, "quantity": "thickness",
         "unit": "nm", "scale": 1000.0, "shared": False,
     }  # fmt: skip
@@ -242,7 +250,8 @@ def _spec(builder: _Builder, stack: Stack, spec: IndexSpec, layer: str, axis: st
         return _cauchy(builder, stack, spec, base, along, c, mean_x)
     vacuum = stack.to_vacuum_um(c.wavelength_um)
     inside = spec.index_inside(stack, vacuum, c.temperature_C)
-    fixed, row = float(stack.index_typed(inside, vacuum)), {}
+    fixed = float(stack.index_typed(inside, vacuum))
+    row: dict[int, float] = {}
     if spec.shift is not None:
         # The material's index already holds an exact shift; only an unknown one adds a column.
         make = base | {
@@ -259,7 +268,8 @@ def _spec(builder: _Builder, stack: Stack, spec: IndexSpec, layer: str, axis: st
 def _cauchy(
     builder: _Builder, stack: Stack, spec: IndexSpec, base: dict[str, object], along: str, c: Context, mean_x: float
 ) -> Row:
-    """n = c0 + c1 (x - x0) + c2 (x^2 - x0^2), x = 1 / wavelength^2: c0 is the index at x0, far better conditioned than A."""
+    """n = c0 + c1 (x - x0) + c2 (x^2 - x0^2), x = 1 / wavelength^2: c0 is the index at x0, far better conditioned
+    than A."""
     layer, axis = base["layer"], base["axis"]
     near0, near1 = near_curve(stack, spec, mean_x)
     x = 1 / c.wavelength_um**2
@@ -267,7 +277,7 @@ def _cauchy(
     windows = [(near0, 0.25, "1", 1.0), (near1, 0.1, "µm²", x - mean_x), (0.0, 0.02, "µm⁴", x**2 - mean_x**2)]
     for i, (start, half, unit, factor) in enumerate(windows[: spec.cauchy_terms]):
         p = Parameter(
-            name=f"curve{i}:{layer}:{axis}", label=f"Cauchy curve term {i} of {layer}{along}", quantity=f"curve_term_{i}",
+            name=f"curve{i}:{layer}:{axis}", label=f"curve term {i} of {layer}{along}", quantity=f"curve_term_{i}",
             shared=False, fitted=True, start=start, low=start - half, high=start + half,
             **(base | {"unit": unit}),  # type: ignore[arg-type]
         )  # fmt: skip
@@ -289,7 +299,8 @@ def near_curve(stack: Stack, spec: IndexSpec, mean_x: float) -> tuple[float, flo
 def _curves(
     builder: _Builder, stack: Stack, contexts: Sequence[Context], mean_x: float
 ) -> list[tuple[str, str, float, Row]]:
-    """Indices that are functions of unknowns rather than unknowns: Cauchy curves and shifted materials, per wavelength."""
+    """Indices that are functions of unknowns rather than unknowns: Cauchy curves and shifted materials, per
+    wavelength."""
     out = []
     for layer in stack.layers:
         for spec, axis in ((layer.index, "in_plane"), (layer.index_normal, "normal")):
