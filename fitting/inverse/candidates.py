@@ -24,6 +24,8 @@ from ..records import Array, BoolArray, IntArray
 
 # A reading within this distance of a whole order may be that mode: noise and prism errors stay well below it.
 NEAR_ORDER = 0.25
+# A labelled one gets more room: it cannot slip to a neighbour, and start values are only near.
+NEAR_LABEL = 0.7
 # What a reading far from every mode adds to a score, in squared units of NEAR_ORDER.
 STRAY_SCORE = 1.5
 MISS_SCORE = 0.3
@@ -112,7 +114,7 @@ def assign(sc: Scene, theta: Array) -> tuple[IntArray, Array]:
     mu = continuous_order(sc, theta)
     nearest = np.where(sc.label >= 0, sc.label, np.maximum(np.round(mu), 0))
     off = np.abs(mu - nearest)
-    ok = off < NEAR_ORDER
+    ok = off < np.where(sc.label >= 0, NEAR_LABEL, NEAR_ORDER)
     order = np.where(ok, nearest, -1).astype(int)
     gap = np.where(ok, (off / NEAR_ORDER) ** 2, STRAY_SCORE)
     for tm in (False, True):
@@ -185,8 +187,8 @@ def _from_pairs(sc: Scene, film: int) -> Array:
     theta = np.tile(lay.starts(), (t.size, 1))
     for i in np.flatnonzero(lay.t_map[film - 1]):
         theta[:, i] = t
-    for g in groups:
-        _set_index(lay, film, sc, g, theta, _best_index(sc, g, t))
+    for g in sorted(groups, key=lambda g: bool(sc.tm[g.members].all())):
+        _set_index(lay, film, sc, g, theta, _best_index(sc, g, t, _tilt(sc, g, film, theta)))
     low, high = lay.bounds()
     return np.clip(theta, low, high)
 
@@ -314,10 +316,20 @@ def _spread_out(t: Array) -> Array:
     return np.asarray(ordered[keep])
 
 
-def _best_index(sc: Scene, g: _Group, t: Array) -> Array:
+def _tilt(sc: Scene, g: _Group, film: int, theta: Array) -> Array:
+    """Factor (T, 1, K) on the wave number of TM modes of a uniaxial film, whose grid took both indices equal."""
+    lay = sc.layout
+    if not (lay.uniaxial and sc.tm[g.members].all()):
+        return np.ones((theta.shape[0], 1, 1))
+    c = sc.context[g.members[0]]
+    in_plane = lay.n_fixed[c, film] + theta @ lay.n_map[c, film]
+    return np.asarray(in_plane[:, None, None] / g.index)
+
+
+def _best_index(sc: Scene, g: _Group, t: Array, tilt: Array) -> Array:
     """Film index (T) of a group that suits its readings best at given thicknesses."""
     with np.errstate(invalid="ignore"):
-        mu = (g.alpha[None] + g.k[None] * t[:, None, None]) / np.pi - 1
+        mu = (g.alpha[None] + g.k[None] * tilt * t[:, None, None]) / np.pi - 1
         label = sc.label[g.members][None, :, None]
         off = np.abs(mu - np.where(label >= 0, label, np.maximum(np.round(mu), 0)))
     cost = np.where(off < NEAR_ORDER, (off / NEAR_ORDER) ** 2, STRAY_SCORE) + np.where(

@@ -110,8 +110,7 @@ def _follow(layout: Layout, fit: SiteFit, shared: Shared, rows: Array) -> tuple[
     if mine.size:
         to_shared[:, where] = rows[:, local] @ gain + rows[:, mine]
     to_known: dict[str, Array] = {}
-    information = fit.jacobian.T @ fit.jacobian + fit.prior.precision
-    held = np.linalg.inv(information[np.ix_(local, local)] + 1e-12 * np.diag(np.diag(information)[local]))
+    held = np.linalg.inv(fit.information[np.ix_(local, local)])
     for k, i in enumerate(np.flatnonzero(local)):
         p = layout.parameters[i]
         if np.isfinite(p.prior_u):

@@ -20,6 +20,7 @@ class SiteFit:
     theta: Array
     covariance: Array
     random: Array
+    information: Array
     chi2: float
     dof: int
     jacobian: Array
@@ -79,11 +80,13 @@ def _split(problem: SiteProblem, orders: IntArray, s: Solution, lin: Linear, pri
     used = int((orders >= 0).sum())
     local = ~layout.shared
     jac = lin.jacobian[0]
-    covariance, random = covariances(jac, prior.precision, local, layout.fitted, layout.bounds())
+    information = jac.T @ jac + prior.precision + _window_weight(layout.fitted, layout.bounds())
+    covariance, random = covariances(jac, information, local)
     return SiteFit(
         theta=s.values,
         covariance=covariance,
         random=random,
+        information=information,
         chi2=s.chi2,
         dof=used - int(layout.fitted.sum()),
         jacobian=jac,
@@ -95,35 +98,32 @@ def _split(problem: SiteProblem, orders: IntArray, s: Solution, lin: Linear, pri
     )
 
 
-def covariances(
-    jac: Array, precision: Array, local: BoolArray, fitted: BoolArray, bounds: tuple[Array, Array]
-) -> tuple[Array, Array]:
-    """Covariance (P, P) and its random part. jac (R, P) divided by u; precision of the priors; local: not shared.
+def _window_weight(fitted: BoolArray, bounds: tuple[Array, Array]) -> Array:
+    """A trace of the knowledge that a fitted unknown lies in its window: it keeps matrices regular where the readings leave
+    a direction open (the rank test keeps such a number from being written), and is too weak to move any other."""
+    width = bounds[1] - bounds[0]
+    return np.diag(np.where(fitted & np.isfinite(width), 12e-6 / width**2, 0.0))
+
+
+def covariances(jac: Array, information: Array, local: BoolArray) -> tuple[Array, Array]:
+    """Covariance (P, P) and its random part. jac (R, P) divided by u; information of readings and priors; local: not
+    shared.
 
     Random is what this site's reading noise does with the shared unknowns held; the rest, the shared unknowns and the
-    known thicknesses of the stack, is common to the sites. A fitted unknown that nothing determines counts as spread
-    evenly over its window, so that the matrix exists; the rank test keeps such a number from being written.
+    known thicknesses of the stack, is common to the sites.
     """
-    width = bounds[1] - bounds[0]
-    even = np.diag(np.where(fitted & np.isfinite(width), 12 / width**2, 0.0))
-    data = jac.T @ jac
-    information = data + precision + even * 1e-6
-    try:
-        covariance = np.asarray(np.linalg.inv(information), dtype=float)
-    except np.linalg.LinAlgError:
-        covariance = np.asarray(np.linalg.inv(data + precision + even), dtype=float)
+    covariance = np.asarray(np.linalg.inv(information), dtype=float)
     a = np.flatnonzero(local)
     random = np.zeros_like(covariance)
     if a.size:
-        held: Array = np.asarray(np.linalg.inv(information[np.ix_(a, a)]))
-        random[np.ix_(a, a)] = held @ data[np.ix_(a, a)] @ held
+        held = np.linalg.inv(information[np.ix_(a, a)])
+        random[np.ix_(a, a)] = held @ (jac.T @ jac)[np.ix_(a, a)] @ held
     return covariance, random
 
 
 def shared_gain(fit: SiteFit, local: BoolArray) -> Array:
     """How the local unknowns follow the shared ones: d(local)/d(shared), (local, shared)."""
-    information = fit.jacobian.T @ fit.jacobian + fit.prior.precision
     a, b = np.flatnonzero(local), np.flatnonzero(~local)
     if not a.size or not b.size:
         return np.zeros((a.size, b.size))
-    return np.asarray(-np.linalg.solve(information[np.ix_(a, a)], information[np.ix_(a, b)]), dtype=float)
+    return np.asarray(-np.linalg.solve(fit.information[np.ix_(a, a)], fit.information[np.ix_(a, b)]), dtype=float)

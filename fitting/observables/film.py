@@ -31,12 +31,6 @@ class FilmReadings:
     u: Array
     valid: BoolArray
 
-    def site(self, s: int) -> FilmReadings:
-        keep = self.valid[s]
-        return FilmReadings(
-            *(x[s : s + 1, keep] for x in (self.context, self.is_angle, self.measured, self.u, self.valid))
-        )
-
 
 class Prediction(NamedTuple):
     """value (S, R); jacobian (S, R, P); exists (S, R): False where the mode or its coupling angle does not exist,
