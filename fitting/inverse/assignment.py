@@ -17,7 +17,7 @@ import numpy as np
 
 from ..observables.film import FilmReadings
 from ..observables.parameters import Layout
-from ..records import Array, BoolArray, IntArray
+from ..records import Array, IntArray
 from . import candidates as cand
 from .descent import Descent, Prior, descend
 
@@ -27,6 +27,10 @@ STOP_PRICE = 2 * np.log(1 / 0.30)
 # A labelled sheet is believed unless other orders are this much better: e^-10 against one sheet in a hundred
 # mislabelled.
 LABEL_PRICE = 20.0
+# A residual whose square exceeds this starts the search for a wrong reading (three and a half u).
+SUSPECT = 12.0
+# Wrong readings chosen otherwise stay in view if they are less than e^7 = 1100 times less likely.
+NEAR_BEST = 14.0
 # Assignments this much dearer than the best weigh less than 1e-6 together and are not kept.
 FAR = 40.0
 _REFINE = 16
@@ -82,54 +86,58 @@ def _hopeful(data: FilmReadings, orders: IntArray, fit: Descent) -> IntArray:
 def _drop_strays(
     layout: Layout, data: FilmReadings, orders: IntArray, theta: Array, prior: Prior
 ) -> tuple[IntArray, Descent]:
-    """Leave out, one at a time, the reading whose residual costs more than calling it a stray."""
-    price = stray_price(data)
-    orders = orders.copy()
+    """Leave out, one at a time, readings that cost more than calling them strays.
+
+    A gross error drags the fit along, so the largest residual need not be the wrong reading: every single one is
+    tried, and every choice that comes near the best one is kept as an assignment of its own.
+    """
     for _ in range(max(1, orders.shape[1] // 2)):
         fit = descend(layout, data, orders, theta, prior, max_steps=12, tolerance=1e-3)
-        theta = fit.theta
-        excess = fit.linear.residual**2 - price
-        gone = _worst_out(layout, data, orders, fit, prior, excess)
-        if not gone.any():
+        branches = _without_one(layout, data, orders, fit, prior)
+        if branches is None:
             break
-        orders[gone] = -1
-    fit = descend(layout, data, orders, theta, prior, max_steps=20, tolerance=1e-5)
-    return orders, fit
+        orders, first = np.unique(branches[0], axis=0, return_index=True)
+        theta = branches[1][first]
+    return orders, descend(layout, data, orders, theta, prior, max_steps=20, tolerance=1e-5)
 
 
-def _worst_out(
-    layout: Layout, data: FilmReadings, orders: IntArray, fit: Descent, prior: Prior, excess: Array
-) -> BoolArray:
-    """For each assignment the one reading (mask (A, R)) whose leaving lowers the price most, where any does.
-
-    A gross error drags the fit along, so the largest residual need not be the wrong reading: every single one is tried.
-    """
-    gone = np.zeros(orders.shape, dtype=bool)
-    poor = np.flatnonzero(((orders >= 0) & (fit.linear.residual**2 > 12)).any(axis=1))
+def _without_one(
+    layout: Layout, data: FilmReadings, orders: IntArray, fit: Descent, prior: Prior
+) -> tuple[IntArray, Array] | None:
+    """Assignments with one reading fewer where that pays, the others as they are; None if it pays nowhere."""
+    bad = (orders >= 0) & (fit.linear.residual**2 > SUSPECT)
+    poor = np.flatnonzero(bad.any(axis=1) & ((orders >= 0).sum(axis=1) > 1))
     rows, cols = np.nonzero(orders[poor] >= 0)
     if not rows.size:
-        return gone
+        return None
     trial = orders[poor][rows].copy()
     trial[np.arange(rows.size), cols] = -1
     out = descend(layout, data, trial, fit.theta[poor][rows], prior, max_steps=8, tolerance=1e-2)
     change = out.cost + stray_price(data)[cols] - fit.cost[poor][rows]
+    kept_orders = [orders[np.setdiff1d(np.arange(orders.shape[0]), poor)]]
+    kept_theta = [fit.theta[np.setdiff1d(np.arange(orders.shape[0]), poor)]]
+    paid = False
     for k, a in enumerate(poor):
         mine = np.flatnonzero(rows == k)
-        if mine.size > 1 and change[mine].min() < 0:
-            gone[a, cols[mine[change[mine].argmin()]]] = True
-    return gone
+        best = change[mine].min()
+        take = mine[(change[mine] < 0) & (change[mine] <= best + NEAR_BEST)]
+        paid |= bool(take.size)
+        kept_orders.append(trial[take] if take.size else orders[a : a + 1])
+        kept_theta.append(out.theta[take] if take.size else fit.theta[a : a + 1])
+    return (np.concatenate(kept_orders), np.concatenate(kept_theta)) if paid else None
 
 
 def _priced(sc: cand.Scene, data: FilmReadings, orders: IntArray, fit: Descent) -> list[Assignment]:
     unseen = cand.unseen_modes(sc, fit.theta, orders)
     price = fit.cost + ((orders < 0) * stray_price(data)).sum(axis=1)
     price = price + SKIP_PRICE * unseen[:, 0] + STOP_PRICE * unseen[:, 1]
+    u = np.sqrt(np.diag(np.linalg.pinv(_information(sc.layout, fit, int(price.argmin())))))
     best: list[Assignment] = []
     for a in np.argsort(price, kind="stable"):
         if price[a] - price.min() > FAR:
             break
         mine = Assignment(orders[a], fit.theta[a], float(price[a]), float(fit.cost[a]))
-        if not any(_same_modes(mine.orders, other.orders) for other in best):
+        if not any(_same_answer(mine, other, u) for other in best):
             best.append(mine)
     weight = np.exp(-(np.array([x.price for x in best]) - best[0].price) / 2)
     return [
@@ -138,7 +146,15 @@ def _priced(sc: cand.Scene, data: FilmReadings, orders: IntArray, fit: Descent) 
     ]
 
 
-def _same_modes(a: IntArray, b: IntArray) -> bool:
-    """Two assignments differ only in what they call a stray: every reading that both use has the same order."""
-    both = (a >= 0) & (b >= 0)
-    return bool(both.any() and (a[both] == b[both]).all())
+def _information(layout: Layout, fit: Descent, a: int) -> Array:
+    _, prior_u = layout.prior()
+    jac = fit.linear.jacobian[a]
+    return np.asarray(jac.T @ jac + np.diag(1 / prior_u**2))
+
+
+def _same_answer(a: Assignment, b: Assignment, u: Array) -> bool:
+    """Two assignments that differ only in what they call a stray: every reading that both use has the same order, and
+    the unknowns agree within five of their standard uncertainties (P)."""
+    both = (a.orders >= 0) & (b.orders >= 0)
+    near = (np.abs(a.theta - b.theta) <= 5 * u).all()
+    return bool(both.any() and (a.orders[both] == b.orders[both]).all() and near)

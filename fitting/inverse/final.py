@@ -99,8 +99,8 @@ def _split(problem: SiteProblem, orders: IntArray, s: Solution, lin: Linear, pri
 
 
 def _window_weight(fitted: BoolArray, bounds: tuple[Array, Array]) -> Array:
-    """A trace of the knowledge that a fitted unknown lies in its window: it keeps matrices regular where the readings leave
-    a direction open (the rank test keeps such a number from being written), and is too weak to move any other."""
+    """A trace of the knowledge that a fitted unknown lies in its window: it keeps matrices regular where the readings
+    leave a direction open (the rank test keeps such a number from being written), and is too weak to move any other."""
     width = bounds[1] - bounds[0]
     return np.diag(np.where(fitted & np.isfinite(width), 12e-6 / width**2, 0.0))
 

@@ -136,7 +136,8 @@ def _judge(problem: SiteProblem, out: Settled, best: Assignment, labelled: bool)
         return
     if rejected:
         _explain_strays(problem, out, best)
-        if rejected * 3 >= used.size:
+        unchecked = int(used.sum()) <= int(problem.layout.fitted.sum())
+        if rejected * 3 > used.size or unchecked:
             out.flags.append(flag("many_rejected", f"{rejected} of {used.size} readings."))
     doubt = 1 - best.probability
     if doubt > AMBIGUOUS:
