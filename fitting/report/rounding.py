@@ -14,7 +14,7 @@ from decimal import ROUND_HALF_EVEN, ROUND_HALF_UP, ROUND_UP, Decimal
 
 # Coverage factor of every U shown: about 95 % for a normal distribution.
 COVERAGE = 2.0
-# Rounding to the nearest may take this share of an uncertainty, no more: 28.05 gives 28, 10.47 gives 11 (the GUM's own).
+# Rounding to the nearest may take this share of an uncertainty, no more: 28.05 is 28, 10.47 is 11 (the GUM's own).
 _MAY_LOSE = Decimal("0.01")
 
 
