@@ -22,16 +22,18 @@ from .layers import SMALLEST_WAVE_NUMBER, Array, Layers, flatten
 
 _BLOCK = 8192
 _THREADS = 2
-_FREE_STEPS = 2
+_COARSE_STEPS = 2
+_EXTRA_STEPS = 2
 _STEPS = 80
 # What a third-order step leaves, in radians of phi, when it counts as converged.
 _DONE = 1e-16
-_TINY = 1e-300
+_TINY = 1e-30
 _HALF_PI = np.pi / 2
 
 
 class _Edge(NamedTuple):
-    """Constants of the mode condition; (bl, dl) the half-space that stops guiding first, (bo, do) the other."""
+    """Constants of the mode condition; (bl, dl) the half-space that stops guiding first, (bo, do) the
+    other; root is sqrt(dl)."""
 
     top: Array
     tau: Array
@@ -40,6 +42,7 @@ class _Edge(NamedTuple):
     dl: Array
     bo: Array
     do: Array
+    root: Array
 
     def take(self, rows: Any) -> _Edge:
         return _Edge(*(x[rows] for x in self))
@@ -106,7 +109,14 @@ def _edge(layers: Layers, order: Array) -> _Edge:
     first = b0 * d1 <= b1 * d0
     bl, dl = np.where(first, b0, b1), np.where(first, d0, d1)
     return _Edge(
-        np.sqrt(bl / dl), layers.tau[0], order * np.pi, bl, dl, np.where(first, b1, b0), np.where(first, d1, d0)
+        np.sqrt(bl / dl),
+        layers.tau[0],
+        order * np.pi,
+        bl,
+        dl,
+        np.where(first, b1, b0),
+        np.where(first, d1, d0),
+        np.sqrt(dl),
     )
 
 
@@ -119,39 +129,58 @@ def _half_space(layers: Layers, over: Array, i: int) -> tuple[Array, Array]:
 
 
 def _solve(e: _Edge, excess: Array) -> tuple[Array, NDArray[np.bool_]]:
-    """s of the mode after a fixed number of free steps, and whether they were enough."""
-    # F runs from -(m + 1) pi at phi = 0 to `excess` at cut-off, as a sine where the film is thick, as phi where it is
-    # thin.
+    """s of the mode after a fixed number of free steps, and whether they were enough.
+
+    Two steps in single precision come within its rounding at half the cost, one in double precision does the rest.
+    """
+    # F runs from -(m + 1) pi at phi = 0 to `excess` at cut-off, as a sine where the film is thick, as phi where it is thin.
     x = (e.mpi + np.pi) / (excess + e.mpi + np.pi)
     strong = e.top * e.tau
     x2 = x * x
     sine = x * (1.5707963 + x2 * (-0.6459641 + x2 * (0.0796926 - 0.0045248 * x2)))
-    sin = np.minimum((strong * x + 1.5708 * sine) / (strong + 1.5708), 1 - 1e-12)
-    cos = np.sqrt((1 - sin) * (1 + sin))
-    for _ in range(_FREE_STEPS):
-        _, step, left = _halley(sin, cos, e)
-        sin, cos = _turn(sin, cos, np.minimum(np.maximum(step, -0.7 * cos), 0.7 * sin))
-    rest = np.flatnonzero(~(left <= _DONE))
-    if rest.size:
-        _, step, left[rest] = _halley(sin[rest], cos[rest], e.take(rest))
-        sin[rest], _ = _turn(sin[rest], cos[rest], np.minimum(np.maximum(step, -0.7 * cos[rest]), 0.7 * sin[rest]))
-    return e.top * sin, left <= _DONE
+    sin = np.minimum((strong * x + 1.5708 * sine) / (strong + 1.5708), 1 - 1e-6)
+    coarse = _Edge(*(y.astype(np.float32) for y in e))
+    sin32 = sin.astype(np.float32)
+    cos32 = np.sqrt((1 - sin32) * (1 + sin32))
+    for _ in range(_COARSE_STEPS):
+        _, step, _, _ = _halley(sin32, cos32, coarse)
+        sin32, cos32 = _turn(sin32, cos32, np.minimum(np.maximum(step, -0.7 * cos32), 0.7 * sin32))
+    sin, cos = sin32.astype(float), cos32.astype(float)
+    # back onto the circle, which single precision only meets to its rounding
+    size = 1 / np.sqrt(sin * sin + cos * cos)
+    sin, cos = sin * size, cos * size
+    _, step, half, first = _halley(sin, cos, e)
+    sin, cos = _turn(sin, cos, np.minimum(np.maximum(step, -0.7 * cos), 0.7 * sin))
+    settled = _left(first, half) <= _DONE
+    if not settled.all():
+        rest = np.flatnonzero(~settled)
+        few = e.take(rest)
+        for _ in range(_EXTRA_STEPS):
+            _, step, half, first = _halley(sin[rest], cos[rest], few)
+            step = np.minimum(np.maximum(step, -0.7 * cos[rest]), 0.7 * sin[rest])
+            sin[rest], cos[rest] = _turn(sin[rest], cos[rest], step)
+        settled[rest] = _left(first, half) <= _DONE
+    return e.top * sin, settled
 
 
-def _halley(sin: Array, cos: Array, e: _Edge) -> tuple[Array, Array, Array]:
-    """F, the step to take off phi, and what is left after it."""
+def _left(step: Array, half: Array) -> Array:
+    """What a Halley step leaves, estimated from its size and its curvature term."""
+    return np.asarray(np.abs(step) * (np.abs(step) + 2 * np.abs(half)) ** 2)
+
+
+def _halley(sin: Array, cos: Array, e: _Edge) -> tuple[Array, Array, Array, Array]:
+    """F, the step to take off phi, its curvature term, and the step once more before any limit."""
     s = e.top * sin
     s2 = s * s
     across = e.top * cos
-    root = np.sqrt(e.dl)
-    rl = root * across
+    rl = e.root * across
     ro2 = np.maximum(e.bo - e.do * s2, _TINY)
     ro = np.sqrt(ro2)
-    # atan(R_l / s) + atan(R_o / s) in one, on (0, pi)
-    f = s * e.tau - e.mpi - _HALF_PI + np.arctan((s2 - rl * ro) / (s * (rl + ro)))
+    # atan(R_l / s) + atan(R_o / s) in one, on (0, pi); s > 0, so the quotient is finite except at s = 0
+    f = s * e.tau - (e.mpi + _HALF_PI) + np.arctan((s2 - rl * ro) / (s * (rl + ro)))
     # d atan(R/s)/ds = -u with u = b / (R V), V = s^2 + R^2; for the limiting side u ds/dphi = k stays finite.
     vl, vo = s2 + rl * rl, s2 + ro2
-    k = e.bl / (root * vl)
+    k = e.bl / (e.root * vl)
     u = e.bo / (ro * vo)
     inner = e.tau + u
     slope = across * inner + k
@@ -159,8 +188,7 @@ def _halley(sin: Array, cos: Array, e: _Edge) -> tuple[Array, Array, Array]:
     newton = f / slope
     half = 0.5 * newton * bend / slope
     step = newton / np.maximum(1 - half, 0.3)
-    size = np.abs(step)
-    return f, step, size * (size + 2 * np.abs(half)) ** 2
+    return f, step, half, step
 
 
 def _turn(sin: Array, cos: Array, step: Array) -> tuple[Array, Array]:
@@ -178,12 +206,12 @@ def _bracketed(e: _Edge) -> Array:
     out = np.empty_like(phi)
     index = np.arange(phi.size)
     for _ in range(_STEPS):
-        f, step, left = _halley(np.sin(phi), np.cos(phi), e)
+        f, step, half, _ = _halley(np.sin(phi), np.cos(phi), e)
         hi, lo = np.where(f > 0, phi, hi), np.where(f > 0, lo, phi)
         new = phi - step
         bad = (new <= lo) | (new >= hi)
         new = np.where(bad, 0.5 * (lo + hi), new)
-        done = ((left <= _DONE) & ~bad) | (hi - lo <= 4e-16)
+        done = ((_left(step, half) <= _DONE) & ~bad) | (hi - lo <= 4e-16)
         out[index[done]] = np.sin(new[done])
         keep = ~done
         if not keep.any():
