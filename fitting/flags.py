@@ -16,6 +16,7 @@ FLAGS: dict[str, str] = {
     "loose_direction": "The readings leave a combination of the unknowns undetermined.",
     "order_ambiguous": "More than one assignment of mode numbers fits. See the rivals for what would settle it.",
     "label_doubtful": "The mode numbers as typed do not fit, others do. Check the labels.",
+    "polarisation_doubtful": "All readings fit if TE and TM are exchanged. Check the polarisation column.",
     "poor_fit": "The readings scatter more than their stated uncertainty allows; uncertainties have been enlarged.",
     "many_rejected": "So many readings fit no mode that the rest cannot be checked. Check the sheet and the stack file.",
     "at_window_edge": "The answer lies at the edge of its fit window. Widen the window in the stack file.",

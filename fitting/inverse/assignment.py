@@ -131,7 +131,7 @@ def _priced(sc: cand.Scene, data: FilmReadings, orders: IntArray, fit: Descent) 
     unseen = cand.unseen_modes(sc, fit.theta, orders)
     price = fit.cost + ((orders < 0) * stray_price(data)).sum(axis=1)
     price = price + SKIP_PRICE * unseen[:, 0] + STOP_PRICE * unseen[:, 1]
-    u = np.sqrt(np.diag(np.linalg.pinv(_information(sc.layout, fit, int(price.argmin())))))
+    u = np.sqrt(np.abs(np.diag(np.linalg.pinv(_information(sc.layout, fit, int(price.argmin()))))))
     best: list[Assignment] = []
     for a in np.argsort(price, kind="stable"):
         if price[a] - price.min() > FAR:

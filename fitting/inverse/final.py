@@ -35,8 +35,13 @@ class _Cached:
     """Residuals and Jacobian come from one mode solve: remembered for every point of one fit, a dozen at most."""
 
     def __init__(self, problem: SiteProblem, orders: IntArray, prior: Prior) -> None:
-        self.problem, self.orders, self.prior = problem, orders[None, :], prior
-        self.root = _root(prior.precision)
+        self.problem, self.orders = problem, orders[None, :]
+        layout = problem.layout
+        self.root, self.mean = _root(prior.precision), prior.mean
+        if int((orders >= 0).sum()) + self.root.shape[0] < len(layout.parameters):
+            # Fewer equations than unknowns: the windows' trace makes up the number, and the rank test says so.
+            self.root = np.concatenate([self.root, np.sqrt(layout.window_weight())[layout.fitted]])
+            self.mean = np.where(layout.fitted, layout.starts(), self.mean)
         self.seen: dict[bytes, Linear] = {}
 
     def look(self, x: Array) -> Linear:
@@ -46,7 +51,7 @@ class _Cached:
         return self.seen[key]
 
     def residual(self, x: Array) -> Array:
-        return np.concatenate([self.look(x).residual[0], self.root @ (self.prior.mean - x)])
+        return np.concatenate([self.look(x).residual[0], self.root @ (self.mean - x)])
 
     def jacobian(self, x: Array) -> Array:
         return np.concatenate([-self.look(x).jacobian[0], -self.root])
@@ -80,7 +85,7 @@ def _split(problem: SiteProblem, orders: IntArray, s: Solution, lin: Linear, pri
     used = int((orders >= 0).sum())
     local = ~layout.shared
     jac = lin.jacobian[0]
-    information = jac.T @ jac + prior.precision + _window_weight(layout.fitted, layout.bounds())
+    information = jac.T @ jac + prior.precision + layout.window_weight()
     covariance, random = covariances(jac, information, local)
     return SiteFit(
         theta=s.values,
@@ -96,13 +101,6 @@ def _split(problem: SiteProblem, orders: IntArray, s: Solution, lin: Linear, pri
         success=s.success,
         prior=prior,
     )
-
-
-def _window_weight(fitted: BoolArray, bounds: tuple[Array, Array]) -> Array:
-    """A trace of the knowledge that a fitted unknown lies in its window: it keeps matrices regular where the readings
-    leave a direction open (the rank test keeps such a number from being written), and is too weak to move any other."""
-    width = bounds[1] - bounds[0]
-    return np.diag(np.where(fitted & np.isfinite(width), 12e-6 / width**2, 0.0))
 
 
 def covariances(jac: Array, information: Array, local: BoolArray) -> tuple[Array, Array]:

@@ -134,7 +134,7 @@ def _site_parts(
     own_prior = Prior.of(layout)
     hess = np.einsum("srp,srq->spq", lin.jacobian, lin.jacobian)
     grad = np.einsum("srp,sr->sp", lin.jacobian, lin.residual)
-    haa = hess[:, own[:, None], own] + own_prior.precision[own[:, None], own]
+    haa = hess[:, own[:, None], own] + (own_prior.precision + layout.window_weight())[own[:, None], own]
     ga = grad[:, own] + (own_prior.mean - theta)[:, own] @ own_prior.precision[own[:, None], own]
     hab = hess[:, own[:, None], mine]
     solved = np.linalg.solve(haa, np.concatenate([ga[..., None], hab], axis=2))

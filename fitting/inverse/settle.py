@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Sequence
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 
 import numpy as np
 
@@ -90,7 +90,22 @@ def settle(problem: SiteProblem) -> Settled:
     out.orders, out.theta, out.price = best.orders, best.theta, best.price
     out.rivals = tuple(ranked[1:])
     _judge(problem, out, best, labelled)
+    if out.withhold:
+        _doubt_polarisation(problem, best, prior, out)
     return out
+
+
+def _doubt_polarisation(problem: SiteProblem, best: Assignment, prior: Prior, out: Settled) -> None:
+    """Where little fits, see whether everything would with TE and TM exchanged."""
+    contexts = problem.layout.contexts
+    partner = [next((k for k, d in enumerate(contexts) if d == replace(c, tm=not c.tm)), None) for c in contexts]
+    mine = [partner[c] for c in problem.data.context[0]]
+    if any(k is None for k in mine):
+        return
+    swapped = replace(problem.data, context=np.array([mine]))
+    ranked = rank(problem.layout, swapped, np.full_like(problem.label, -1), prior)
+    if ranked and (ranked[0].orders >= 0).all() and ranked[0].price + LABEL_PRICE < best.price:
+        out.flags.append(flag("polarisation_doubtful"))
 
 
 def p_value(chi2: float, dof: int) -> float:
@@ -107,7 +122,8 @@ def _doubt_labels(problem: SiteProblem, ranked: list[Assignment], prior: Prior, 
     if ranked and (ranked[0].orders >= 0).all() and (dof < 1 or p_value(ranked[0].chi2, dof) > POOR):
         return ranked
     free = rank(layout, data, np.full_like(problem.label, -1), prior)
-    if not free or (ranked and free[0].price + LABEL_PRICE > ranked[0].price):
+    few_left = bool(free) and 3 * int((free[0].orders >= 0).sum()) < 2 * problem.label.size
+    if not free or few_left or (ranked and free[0].price + LABEL_PRICE > ranked[0].price):
         return ranked
     typed, found = problem.label, free[0].orders
     changed = [
@@ -139,10 +155,11 @@ def _judge(problem: SiteProblem, out: Settled, best: Assignment, labelled: bool)
         unchecked = int(used.sum()) <= int(problem.layout.fitted.sum())
         if rejected * 3 > used.size or unchecked:
             out.flags.append(flag("many_rejected", f"{rejected} of {used.size} readings."))
+            out.withhold = True
     doubt = 1 - best.probability
     if doubt > AMBIGUOUS:
         out.flags.append(flag("order_ambiguous", f"The best one has probability {best.probability:.3f}."))
-        out.withhold = doubt > UNDECIDED
+        out.withhold |= doubt > UNDECIDED
     elif not labelled:
         out.notes.append(flag("orders_found"))
 

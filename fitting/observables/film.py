@@ -47,6 +47,12 @@ def predict(layout: Layout, readings: FilmReadings, theta: Array, order: IntArra
     sites, count = theta.shape[0], len(layout.parameters)
     ctx = np.broadcast_to(readings.context, (sites, readings.context.shape[1]))
     wanted = np.broadcast_to(readings.valid, ctx.shape) & (order >= 0)
+    out = np.zeros(ctx.shape)
+    jacobian = np.zeros((*ctx.shape, count))
+    exists = np.zeros(ctx.shape, dtype=bool)
+    loss = np.zeros(ctx.shape)
+    if not wanted.any():
+        return Prediction(out, jacobian, exists, loss)
     s_of, _ = np.nonzero(wanted)
     c = ctx[wanted]
     mine = theta[s_of]
@@ -68,10 +74,6 @@ def predict(layout: Layout, readings: FilmReadings, theta: Array, order: IntArra
     value, jac, reachable = _read(
         layout, np.broadcast_to(readings.is_angle, ctx.shape)[wanted], c, theta[s_of], N, slope
     )
-    out = np.zeros(ctx.shape)
-    jacobian = np.zeros((*ctx.shape, count))
-    exists = np.zeros(ctx.shape, dtype=bool)
-    loss = np.zeros(ctx.shape)
     out[wanted], jacobian[wanted], exists[wanted] = value, jac, there & reachable
     loss[wanted] = np.where(there, modes.loss_index, 0.0)
     return Prediction(out, jacobian, exists, loss)
