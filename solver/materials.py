@@ -206,6 +206,9 @@ class Material:
             own, own_slope = lam / air, (air - lam * air_slope) / air**2
         own = within(own, *self.range_um, material=self.name, what="wavelengths", unit="nm", scale=1000)
         n, slope = self.formula.index(own), self.formula.slope_per_um(own) * own_slope
+        if not np.isfinite(n).all():
+            at_nm = float(own[~np.isfinite(n)].flat[0]) * 1000
+            raise ValueError(f"{self.name} gives no real index at {at_nm:g} nm")
         if self.index_medium == "air":
             n, slope = n * air, slope * air + n * air_slope
         if temperature_C is None or self.thermo is None or self.temperature_C is None:
