@@ -21,9 +21,10 @@ sys.path.insert(0, str(Path(__file__).resolve().parents[2]))
 from layerlot.fitting.inverse import fit_table
 from layerlot.fitting.inverse.descent import Prior, linearise
 from layerlot.fitting.inverse.problem import SiteProblem, build_problems
-from tests.fitting.synthetic import read_stack_text, readings_of
+from layerlot.fitting.stack import parse_stack
 
 from tests.bench.machine import best_seconds, describe
+from tests.fitting.synthetic import readings_of
 from tests.reference.truth import SyntheticTable, draw_tables
 
 RATIO_TARGET, SITE_TARGET_MS, BOOK_TARGET_S = 15.0, 10.0, 30.0
@@ -62,7 +63,7 @@ def bare(problem: SiteProblem) -> None:
 def one_site() -> tuple[float, float, float]:
     """Seconds of the bare call, of one site alone through the product, and of one site among many."""
     table = draw_tables("nitride_two_wavelengths", 2000, 2000, seed=5)[0]
-    stack = read_stack_text(table.stack_toml)
+    stack = parse_stack(table.stack_toml, "stack.toml")
     sites = eight_readings(table)
     rows = {site: [r for r in table.rows if r["site"] == site] for site in sites}
     alone = readings_of(rows[sites[0]])

@@ -39,6 +39,8 @@ STACK = f"""\
 # Invented scenario: Harrow Fen Photonics, its films, prism and numbers exist nowhere.
 title = "Nitride on fused silica, monitor wafers of lot {LOT} (invented)"
 reference_temperature_C = 20.0
+index_reference = "air"                   # as the bench knows them: wavelengths and indices relative to air
+wavelength_reference = "air"
 
 [[layer]]                                 # from the substrate up; first and last are half-spaces
 name = "substrate"
@@ -76,7 +78,7 @@ class Site:
 
 
 def silica_index(wavelength_um: float) -> float:
-    """Fused silica by I. H. Malitson, J. Opt. Soc. Am. 55, 1205 (1965), coefficients from memory."""
+    """Fused silica relative to air, I. H. Malitson, J. Opt. Soc. Am. 55, 1205 (1965), coefficients from memory."""
     x = wavelength_um**2
     terms = ((0.6961663, 0.0684043), (0.4079426, 0.1162414), (0.8974794, 9.896161))
     return float(np.sqrt(1 + sum(b * x / (x - c**2) for b, c in terms)))
