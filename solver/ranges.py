@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from math import isfinite
+
 import numpy as np
 from numpy.typing import ArrayLike, NDArray
 
@@ -15,7 +17,8 @@ class OutOfRangeError(ValueError):
 
     def __init__(self, material: str, what: str, value: float, low: float, high: float, unit: str) -> None:
         self.material, self.what, self.value, self.low, self.high, self.unit = material, what, value, low, high, unit
-        super().__init__(f"{material} is known for {what} from {low:g} to {high:g} {unit}, not at {value:g} {unit}")
+        limits = f"{low:g} to {high:g}" if isfinite(high) else f"{low:g}"
+        super().__init__(f"{material} is known for {what} from {limits} {unit}, not at {value:g} {unit}")
 
     def __reduce__(self) -> tuple[type[OutOfRangeError], tuple[str, str, float, float, float, str]]:
         return OutOfRangeError, (self.material, self.what, self.value, self.low, self.high, self.unit)
