@@ -78,9 +78,12 @@ def unit_mark(unit: str) -> str:
 
 
 def with_unit(text: str, unit: str) -> str:
-    """Figures and unit, `402.31 nm`, `12.6°`."""
+    """Figures and unit: `402.31 nm`, `12.6°`; `(402.31 ± 0.77) nm`, bracketed as in JCGM 100:2008, 7.2.2."""
     mark = unit_mark(unit)
-    return text if not mark else f"{text}{mark}" if mark == "°" else f"{text} {mark}"
+    if not mark:
+        return text
+    figures = f"({text})" if "±" in text else text
+    return f"{figures}{mark}" if mark == "°" else f"{figures} {mark}"
 
 
 def place_levels(sites: Sequence[SiteResult]) -> list[str]:

@@ -1,21 +1,17 @@
 """results.xlsx: readable as it stands, every number with its unit in the head and its digits from its uncertainty.
 
 sheets: answers (one row a site), means, readings (with residuals), budget, shared and flags
-
-Rows are streamed (openpyxl's write-only mode). A streamed cell is serialised as its row is appended, so one cell object per
-column and format is enough; a thousand sites take two seconds rather than six.
 """
 
 from __future__ import annotations
 
 from collections.abc import Iterable, Sequence
-from dataclasses import dataclass
 from pathlib import Path
-from typing import Any
 
 from ..records import Estimate, FitResult, FittedReading, GroupMean, SiteResult
 from .rounding import COVERAGE
 from .rounding import decimals as places
+from .sheetfile import MOST_DECIMALS, Book, Cell, Number
 from .summary import CAUTION, KEY
 from .view import by_column, columns, mean_columns, mean_rows, mode_name, normalised, reading_unit, wavelength_nm
 from .words import (
@@ -29,143 +25,31 @@ from .words import (
     verdict,
 )
 
-Value = str | float | int | None
-# Excel shows at most 30 decimals and its cells hold 15 digits; more than 9 decimals never mean anything here.
-_MOST_DECIMALS = 9
+Table = tuple[list[str], Iterable[Sequence[Cell]], int]  # heads, rows, columns that stay in view
 _ANGLE_DECIMALS, _INDEX_DECIMALS = 4, 6
-
-
-@dataclass(frozen=True)
-class Number:
-    """A figure with the number of decimals it is shown to; the cell keeps all digits."""
-
-    value: float
-    decimals: int
-
-    @property
-    def format(self) -> str:
-        """Spreadsheet number format."""
-        n = min(max(self.decimals, 0), _MOST_DECIMALS)
-        return "0." + "0" * n if n else "0"
-
-
-Cell = Value | Number
-
-
-class _Sheet:
-    """One streamed sheet: title lines, a head row that stays in view with a filter on it, then rows."""
-
-    def __init__(self, book: Any, name: str, notes: Sequence[str], heads: Sequence[str], frozen_columns: int) -> None:
-        from openpyxl.cell import WriteOnlyCell
-        from openpyxl.styles import Alignment, Font, PatternFill
-        from openpyxl.utils import get_column_letter
-
-        self._make = WriteOnlyCell
-        self._pool: dict[tuple[int, str], Any] = {}
-        self.sheet = book.create_sheet(name)
-        self.heads = heads
-        self.row = len(notes) + 1
-        self._letter = get_column_letter
-        self.sheet.freeze_panes = f"{get_column_letter(frozen_columns + 1)}{self.row + 1}"
-        for i, head in enumerate(heads):
-            self.sheet.column_dimensions[get_column_letter(i + 1)].width = _width(head)
-        self.sheet.print_title_rows = f"{self.row}:{self.row}"
-        self.sheet.page_setup.orientation = "landscape"
-        self.sheet.page_setup.fitToHeight = 0
-        self.sheet.sheet_properties.pageSetUpPr.fitToPage = True
-        for text in notes:
-            cell = WriteOnlyCell(self.sheet, text)
-            cell.font = Font(italic=True)
-            self.sheet.append([cell])
-        line = []
-        for head in heads:
-            cell = WriteOnlyCell(self.sheet, head)
-            cell.font = Font(bold=True)
-            cell.fill = PatternFill("solid", fgColor="E6E6E6")
-            cell.alignment = Alignment(wrap_text=True, vertical="top")
-            line.append(cell)
-        self._bold = Font(bold=True)
-        self.sheet.append(line)
-
-    def add(self, cells: Sequence[Cell]) -> None:
-        """Append a row; a Number takes its format along."""
-        self.row += 1
-        self.sheet.append([self._cell(i, c) for i, c in enumerate(cells)])
-
-    def _cell(self, column: int, value: Cell) -> Any:
-        if isinstance(value, Number):
-            cell = self._pooled(column, value.format)
-            cell.value = value.value
-            return cell
-        if isinstance(value, str):
-            cell = self._pooled(column, "bold" if value in ("FLAGGED", "FAILED") else "text")
-            cell.value = value
-            # text from a data file must stay text, also where it begins with an equals sign
-            cell.data_type = "s"
-            return cell
-        return value
-
-    def _pooled(self, column: int, kind: str) -> Any:
-        cell = self._pool.get((column, kind))
-        if cell is None:
-            cell = self._pool[column, kind] = self._make(self.sheet)
-            if kind == "bold":
-                cell.font = self._bold
-            elif kind != "text":
-                cell.number_format = kind
-        return cell
-
-    def done(self, head_row: int) -> None:
-        """Put the filter on the head row, over all rows."""
-        if self.row > head_row:
-            self.sheet.auto_filter.ref = f"A{head_row}:{self._letter(len(self.heads))}{self.row}"
-
-
-def _width(head: str) -> float:
-    """Wide enough for figures and for the longest word of the head."""
-    if head in ("flags and what to do", "text", "file", "remark"):
-        return 60.0
-    return max(11.0, max(len(w) for w in head.split()) + 3.0)
-
-
-def write_workbook(result: FitResult, path: Path) -> None:
-    """Write the workbook. Raises OSError where the path cannot be written."""
-    from openpyxl import Workbook
-
-    book = Workbook(write_only=True)
-    book.properties.title = result.title
-    book.properties.creator = f"layerlot {result.version}"
-    _fill(book, "answers", [result.title, verdict(result), KEY, CAUTION], *_answers(result))
-    _fill(book, "means", [_MEANS_NOTE], *_means(result))
-    _fill(
-        book,
-        "readings",
-        ["normalised residual = (measured - predicted) / u; a reading not used has none"],
-        *_readings(result),
-    )
-    _fill(book, "budget", [_BUDGET_NOTE], *_budget(result))
-    _fill(book, "shared and flags", [], *_rest(result))
-    book.save(path)
-
-
+_PARTS = ("U, k = 2", "u", "u (random)", "u (shared)", "95 % from", "95 % to")
 _MEANS_NOTE = (
     "u (shared) is common to all sites and does not average down; spread is the standard deviation of what was averaged"
 )
 _BUDGET_NOTE = (
     "shares of the standard uncertainty u, in the unit of the quantity; the squares of a row's shares add up to u²"
 )
+_READINGS_NOTE = "normalised residual = (measured - predicted) / u; a reading that was not used has none"
 
 
-def _fill(
-    book: Any, name: str, notes: Sequence[str], heads: Sequence[str], rows: Iterable[Sequence[Cell]], frozen: int
-) -> None:
-    sheet = _Sheet(book, name, notes, heads, frozen)
-    for row in rows:
-        sheet.add(row)
-    sheet.done(len(notes) + 1)
-
-
-Table = tuple[list[str], Iterable[Sequence[Cell]], int]
+def write_workbook(result: FitResult, path: Path) -> None:
+    """Write the workbook. Raises OSError where the path cannot be written."""
+    book = Book(result.title, f"layerlot {result.version}")
+    book.add_sheet("answers", [result.title, verdict(result), KEY, CAUTION], *_answers(result))
+    book.add_sheet("means", [_MEANS_NOTE], *_means(result))
+    book.add_sheet("readings", [_READINGS_NOTE], *_readings(result))
+    book.add_sheet("budget", [_BUDGET_NOTE], *_budget(result))
+    book.add_sheet(
+        "shared and flags",
+        ["what all sites share, what is wrong and what to do, what the figures rest on"],
+        *_rest(result),
+    )
+    book.save(path)
 
 
 def _answers(result: FitResult) -> Table:
@@ -179,9 +63,6 @@ def _answers(result: FitResult) -> Table:
     return heads, (_answer_row(s, levels, cols) for s in result.sites), len(levels)
 
 
-_PARTS = ("U, k = 2", "u", "u (random)", "u (shared)", "95 % from", "95 % to")
-
-
 def _answer_row(s: SiteResult, levels: Sequence[str], cols: Sequence[Column]) -> list[Cell]:
     found = by_column(s)
     row: list[Cell] = [getattr(s, level) for level in levels]
@@ -192,8 +73,15 @@ def _answer_row(s: SiteResult, levels: Sequence[str], cols: Sequence[Column]) ->
     if s.fit is None:
         row += [None] * 5
     else:
-        p = None if s.fit.p_value is None else Number(s.fit.p_value, 3)
-        row += [Number(s.fit.chi2, 2), s.fit.dof, p, s.fit.readings_used, s.fit.readings_rejected]
+        p = s.fit.p_value
+        digits = 3 if p is None or not 0 < p < 0.01 else places(p)
+        row += [
+            Number(s.fit.chi2, 2),
+            s.fit.dof,
+            None if p is None else Number(p, digits),
+            s.fit.readings_used,
+            s.fit.readings_rejected,
+        ]
     row.append("; ".join(f.text for f in (*s.flags, *s.notes)) or None)
     return row
 
@@ -282,7 +170,7 @@ def _rest(result: FitResult) -> Table:
     heads = ["kind", "subject", "value", "u", "stated value", "stated u", "unit", "text"]
     rows: list[list[Cell]] = []
     for e in result.shared:
-        n = places(e.u) if e.u > 0 else _MOST_DECIMALS
+        n = places(e.u) if e.u > 0 else MOST_DECIMALS
         stated: list[Cell] = [None, None] if e.prior is None else [Number(e.prior[0], n), Number(e.prior[1], n)]
         rows.append(
             ["shared quantity", column_of(e).name, Number(e.value, n), Number(e.u, n), *stated, e.unit, e.origin]
@@ -296,7 +184,7 @@ def _rest(result: FitResult) -> Table:
             words = f"{r.orders} (probability {r.probability:.3g}, delta chi-squared {r.delta_chi2:.3g})"
             rows.append(["rival mode orders", ", ".join(filter(None, (s.lot, s.wafer, s.site))), *blank, words])
             for e in r.estimates:
-                n = places(e.u) if e.u > 0 else _MOST_DECIMALS
+                n = places(e.u) if e.u > 0 else MOST_DECIMALS
                 rows.append(["rival", column_of(e).name, Number(e.value, n), Number(e.u, n), None, None, e.unit, None])
     rows += [["convention", None, *blank, text] for text in result.conventions]
     rows += [["input", f.file, *blank, f"SHA-256 {f.sha256}"] for f in result.inputs]
