@@ -223,6 +223,8 @@ def _broken(message: str, text: str, file: str) -> Fault:
     remedy = "correct this line: texts in double quotes, decimal points, every bracket closed"
     if re.search(r"=\s*\[?\s*\d+,\d", line):
         remedy = "write decimal points, not commas"
+    elif "overwrite" in what or "twice" in what:
+        remedy = "give each key once in a section"
     return Fault(Place(file, row=row), was, "the line is no valid TOML", remedy)
 
 

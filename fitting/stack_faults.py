@@ -66,7 +66,7 @@ def _layer_faults(layers: Sequence[Mapping[str, Any]]) -> list[Found]:
             if "thickness_nm" in layer:
                 role = "first" if number == 1 else "last"
                 required = f"the {role} layer is a half-space and has no thickness"
-                found.append((where, ("a thickness", required, "remove it, or add the layer beyond")))
+                found.append((where, (_show(layer["thickness_nm"]), required, "remove it, or add the layer beyond")))
         elif not any(nearest([key], ["thickness_nm"]) for key in layer):
             remedy = "add thickness_nm = a number, { value, u } or { fit = [low, high] }"
             found.append((where, ("missing", "every layer between the half-spaces has a thickness", remedy)))
@@ -159,7 +159,8 @@ def _requirement(kind: str, context: Mapping[str, Any], key: str, is_section: bo
     if kind == "literal_error":
         return f"{context['expected']} is required".replace("'", '"'), "write one of these"
     if kind in _LIMITS:
-        return f"a number {_LIMITS[kind]} {next(iter(context.values())):g} is required", "correct the number"
+        remedy = "write degrees Celsius" if key.endswith("_C") else "correct the number"
+        return f"a number {_LIMITS[kind]} {next(iter(context.values())):g} is required", remedy
     if kind in ("too_short", "too_long"):
         limit = context.get("min_length") if kind == "too_short" else context.get("max_length")
         return f"{'at least' if kind == 'too_short' else 'at most'} {limit} numbers are required", "correct the list"
@@ -176,6 +177,9 @@ def _unknown_key(d: ErrorDetails, key: str) -> tuple[str, str, str]:
         return f"u = {_show(d['input'])}", "a fitted quantity has no u of its own", remedy
     close = nearest([key], keys)
     remedy = f"did you mean {close}?" if close else f"remove it; known are {', '.join(keys)}"
+    stem, _, unit = close.rpartition("_")
+    if stem and key.startswith(f"{stem}_"):
+        remedy = f"write {close}, in {unit}"
     return f"unknown key {key}", "only known keys are read", remedy
 
 

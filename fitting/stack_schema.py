@@ -111,10 +111,9 @@ def between(low: float, high: float, what: str, remedy: str) -> AfterValidator:
     """Every value that the quantity can take lies strictly between the limits."""
 
     def check(q: Any) -> Any:
-        if isinstance(q, (int, float, Known, Fit)):
-            for x in _extremes(q):
-                if not low < x < high:
-                    refuse(f"{x:g}", f"{what} lies between {low:g} and {high:g}", remedy)
+        for x in _extremes(q) if isinstance(q, (int, float, Known, Fit)) else ():
+            if not low < x < high:
+                refuse(f"{x:g}", f"{what} lies between {low:.7g} and {high:.7g}", remedy)
         return q
 
     return AfterValidator(check)
@@ -153,6 +152,13 @@ class Entry(Dispersive):
     material: Name
 
 
+def _as_many(curve: SellmeierCurve) -> SellmeierCurve:
+    b, c = len(curve.sellmeier_B), len(curve.sellmeier_C_um)
+    if b != c:
+        refuse(f"{b} B and {c} C", "as many sellmeier_C_um as sellmeier_B are required", "give one C for each B")
+    return curve
+
+
 class SellmeierCurve(Dispersive):
     sellmeier_B: list[float] = Field(min_length=1)
     sellmeier_C_um: list[float] = Field(min_length=1)
@@ -168,6 +174,8 @@ def _rows(table: list[list[float]]) -> list[list[float]]:
     for number, row in enumerate(table, start=1):
         if len(row) != 2:
             refuse(f"row {number} has {len(row)} values", "a row is [wavelength_nm, n]", "write two numbers a row")
+        if row[0] < INDEX[1] and row[1] >= WAVELENGTH_NM[0]:
+            refuse(f"row {number}: [{row[0]:g}, {row[1]:g}]", "a row is [wavelength_nm, n]", "swap the two columns")
         check_wavelength_nm(row[0], f"row {number}: ")
         if not INDEX[0] < row[1] < INDEX[1]:
             required = f"a refractive index lies between {INDEX[0]:g} and {INDEX[1]:g}"
@@ -240,7 +248,7 @@ AnyIndex = Annotated[
     | Annotated[Fit, AfterValidator(_start_inside), between(*INDEX, "a refractive index", _index_remedy), Tag("<fit>")]
     | Annotated[Name, Tag("<name>")]
     | Annotated[Entry, Tag("<material>")]
-    | Annotated[SellmeierCurve, Tag("<sellmeier>")]
+    | Annotated[SellmeierCurve, AfterValidator(_as_many), Tag("<sellmeier>")]
     | Annotated[CauchyCurve, Tag("<cauchy>")]
     | Annotated[TableCurve, Tag("<table>")]
     | Annotated[FitCurve, Tag("<curve>")],
@@ -252,11 +260,26 @@ def length(what: str, remedy: str, high: float = 1e6) -> AfterValidator:
     return between(0.0, high, what, remedy)
 
 
+def _not_micrometres(q: float | Known | Fit | None) -> float | Known | Fit | None:
+    """No film is thinner than 1 nm: such a number was meant in µm."""
+    if q is not None and 0 < max(_extremes(q)) < 1:
+        hint = " to ".join(f"{x * 1000:g}" for x in _extremes(q))
+        refuse("", "thicknesses are in nm, and no film is thinner than 1 nm", f"if µm was meant, write {hint}")
+    return q
+
+
 class LayerDocument(Strict):
     name: str = Field(min_length=1)
     index: AnyIndex
     index_normal: AnyIndex | None = None
-    thickness_nm: Annotated[AnyQuantity, length("a thickness in nm", "write the thickness in nm")] | None = None
+    thickness_nm: (
+        Annotated[
+            AnyQuantity,
+            length("a thickness in nm", "write the thickness in nm"),
+            AfterValidator(_not_micrometres),
+        ]
+        | None
+    ) = None
 
 
 class PrismDocument(Strict):
