@@ -24,6 +24,7 @@ from .slab import mode_index
 
 Array = NDArray[np.float64]
 Complex = NDArray[np.complex128]
+Flags = NDArray[np.bool_]
 
 _MAX_STEPS = 40
 # Newton from the companion's root may move N by its coupling to the half-space; more than this share of the distance
@@ -52,7 +53,7 @@ class ComplexDerivatives:
 class Stack:
     """Complex coefficients (L, B) of a batch, and tau (L - 2, B)."""
 
-    def __init__(self, n: Complex, n_normal: Complex | None, t_um: Array, wavelength_um: Array, tm: Array) -> None:
+    def __init__(self, n: Complex, n_normal: Complex | None, t_um: Array, wavelength_um: Array, tm: Flags) -> None:
         """n, n_normal: (B, L); t_um (B, L-2); wavelength_um, tm (B)."""
         n2 = n.T**2
         m2 = n2 if n_normal is None else n_normal.T**2
@@ -68,7 +69,7 @@ class Stack:
         return out
 
 
-def half_space(stack: Stack, q: Complex, i: int, outgoing: Array) -> Complex:
+def half_space(stack: Stack, q: Complex, i: int, outgoing: Flags) -> Complex:
     """Decay constant g of half-space i, field exp(-g x) outwards: g^2 = (q b - a) / w on the branch asked for.
 
     Decaying: Re g > 0. Outgoing: with exp(+j w t), exp(-g x) travels outwards for Im g > 0.
@@ -79,7 +80,7 @@ def half_space(stack: Stack, q: Complex, i: int, outgoing: Array) -> Complex:
     return np.asarray(np.where(flip, -g, g))
 
 
-def mismatch(stack: Stack, q: Complex, outgoing: Array) -> tuple[Complex, Complex]:
+def mismatch(stack: Stack, q: Complex, outgoing: Flags) -> tuple[Complex, Complex]:
     """Mode condition D(q) and dD/dq, scaled against overflow; outgoing: (2, B) for substrate and cover.
 
     D = v_L psi_R - psi_L v_R at the top of the last film, both fields normalised to its largest size.
@@ -115,7 +116,7 @@ def _cross(
     return psi2, v2, dpsi2, dv2
 
 
-def waves(g: Complex, tau: Array) -> tuple[Complex, Complex, Complex]:
+def waves(g: Complex, tau: Array) -> tuple[Any, Any, Any]:
     """cos(k tau), sin(k tau)/k and (sin(k tau)/k - tau cos(k tau)) / (2 k^2) with k = sqrt(g), all entire in g."""
     k = np.sqrt(g)
     x = k * tau
@@ -129,7 +130,7 @@ def waves(g: Complex, tau: Array) -> tuple[Complex, Complex, Complex]:
     return c, tau * sinc, tau**3 * rest
 
 
-def polish(stack: Stack, N: Complex, outgoing: Array) -> tuple[Complex, NDArray[np.bool_]]:
+def polish(stack: Stack, N: Complex, outgoing: Flags) -> tuple[Complex, Flags]:
     """Newton on the mode condition from seeds N (B); returns roots and whether each has converged."""
     q = N**2
     done = np.zeros(q.size, dtype=bool)
@@ -190,7 +191,7 @@ def _batch(
     order: ArrayLike,
     tm: ArrayLike,
     n_normal: ArrayLike | None,
-) -> tuple[Complex, Array, Array, tuple[int, ...], Complex | None, NDArray[np.bool_], Array]:
+) -> tuple[Complex, Array, Array, tuple[int, ...], Complex | None, Flags, Array]:
     n_, t, lam = np.asarray(n, dtype=complex), np.asarray(t_um, dtype=float), np.asarray(wavelength_um, dtype=float)
     if n_.shape[-1] < 3 or t.shape[-1] != n_.shape[-1] - 2:
         raise ValueError(f"n has {n_.shape[-1]} layers and t_um {t.shape[-1]} thicknesses; films need one each")
@@ -207,15 +208,13 @@ def _batch(
     return rows(n_, count), rows(t, count - 2), flat[0], shape, flat_normal, flat[1] != 0, flat[2].astype(float)
 
 
-def _radiates(stack: Stack, N: Array) -> NDArray[np.bool_]:
+def _radiates(stack: Stack, N: Array) -> Flags:
     """(2, B): whether substrate and cover carry an outgoing wave at N, by the real part of their light line."""
     line = np.sqrt(stack.a[[0, -1]] / stack.b[[0, -1]]).real
     return np.asarray(line > N)
 
 
-def _companion(
-    n: Array, normal: Array | None, t: Array, lam: Array, tm: NDArray[np.bool_], order: Array
-) -> tuple[Array, Array]:
+def _companion(n: Array, normal: Array | None, t: Array, lam: Array, tm: Flags, order: Array) -> tuple[Array, Array]:
     """Real effective index of the closed companion's mode (B), and the distance to the next order up (B)."""
     top = n[:, 1:-1].max(axis=1)
     from_cover = n[:, -1] >= top
@@ -268,7 +267,7 @@ def leaky_derivatives(
 
 
 def _derivatives(
-    stack: Stack, N: Complex, lam: Array, tm: NDArray[np.bool_], *, isotropic: bool
+    stack: Stack, N: Complex, lam: Array, tm: Flags, *, isotropic: bool
 ) -> tuple[Complex, Complex, Complex, Complex]:
     w, a, b, q = stack.w, stack.a, stack.b, N**2
     psi2, wpsi1, h = _field_integrals(stack, q, _radiates(stack, N.real))
@@ -282,7 +281,7 @@ def _derivatives(
     return along, normal, dt, dl[None]
 
 
-def _field_integrals(stack: Stack, q: Complex, outgoing: NDArray[np.bool_]) -> tuple[Complex, Complex, Complex]:
+def _field_integrals(stack: Stack, q: Complex, outgoing: Flags) -> tuple[Complex, Complex, Complex]:
     """Integrals of psi^2 and w psi'^2 over every layer (L, B), and h of every film (L - 2, B), on one common scale.
 
     Upward values serve the films up to the one of highest index, downward ones those above it.
@@ -325,7 +324,7 @@ def _ratio(
     return np.asarray(np.where(by_psi, top / safe_psi, -v_up / safe_v))
 
 
-def _half(stack: Stack, q: Complex, i: int, outgoing: NDArray[np.bool_]) -> tuple[Complex, Complex, Complex]:
+def _half(stack: Stack, q: Complex, i: int, outgoing: Flags) -> tuple[Complex, Complex, Complex]:
     """v, integral of psi^2 and of w psi'^2 of a half-space for psi = 1 at its edge (analytic where it grows
     outwards)."""
     g = half_space(stack, q, i, outgoing)

@@ -31,18 +31,21 @@ _TINY = 1e-30
 _HALF_PI = np.pi / 2
 
 
+Real = NDArray[np.floating[Any]]  # double, or single for the coarse steps
+
+
 class _Edge(NamedTuple):
     """Constants of the mode condition; (bl, dl) the half-space that stops guiding first, (bo, do) the
     other; root is sqrt(dl)."""
 
-    top: Array
-    tau: Array
-    mpi: Array
-    bl: Array
-    dl: Array
-    bo: Array
-    do: Array
-    root: Array
+    top: Real
+    tau: Real
+    mpi: Real
+    bl: Real
+    dl: Real
+    bo: Real
+    do: Real
+    root: Real
 
     def take(self, rows: Any) -> _Edge:
         return _Edge(*(x[rows] for x in self))
@@ -133,15 +136,16 @@ def _solve(e: _Edge, excess: Array) -> tuple[Array, NDArray[np.bool_]]:
 
     Two steps in single precision come within its rounding at half the cost, one in double precision does the rest.
     """
-    # F runs from -(m + 1) pi at phi = 0 to `excess` at cut-off, as a sine where the film is thick, as phi where it is thin.
+    # F runs from -(m + 1) pi at phi = 0 to `excess` at cut-off, as a sine where the film is thick, as phi where it is
+    # thin.
     x = (e.mpi + np.pi) / (excess + e.mpi + np.pi)
     strong = e.top * e.tau
     x2 = x * x
     sine = x * (1.5707963 + x2 * (-0.6459641 + x2 * (0.0796926 - 0.0045248 * x2)))
     sin = np.minimum((strong * x + 1.5708 * sine) / (strong + 1.5708), 1 - 1e-6)
     coarse = _Edge(*(y.astype(np.float32) for y in e))
-    sin32 = sin.astype(np.float32)
-    cos32 = np.sqrt((1 - sin32) * (1 + sin32))
+    sin32: Real = sin.astype(np.float32)
+    cos32: Real = np.sqrt((1 - sin32) * (1 + sin32))
     for _ in range(_COARSE_STEPS):
         _, step, _, _ = _halley(sin32, cos32, coarse)
         sin32, cos32 = _turn(sin32, cos32, np.minimum(np.maximum(step, -0.7 * cos32), 0.7 * sin32))
@@ -163,12 +167,12 @@ def _solve(e: _Edge, excess: Array) -> tuple[Array, NDArray[np.bool_]]:
     return e.top * sin, settled
 
 
-def _left(step: Array, half: Array) -> Array:
+def _left(step: Real, half: Real) -> Real:
     """What a Halley step leaves, estimated from its size and its curvature term."""
     return np.asarray(np.abs(step) * (np.abs(step) + 2 * np.abs(half)) ** 2)
 
 
-def _halley(sin: Array, cos: Array, e: _Edge) -> tuple[Array, Array, Array, Array]:
+def _halley(sin: Real, cos: Real, e: _Edge) -> tuple[Real, Real, Real, Real]:
     """F, the step to take off phi, its curvature term, and the step once more before any limit."""
     s = e.top * sin
     s2 = s * s
@@ -191,7 +195,7 @@ def _halley(sin: Array, cos: Array, e: _Edge) -> tuple[Array, Array, Array, Arra
     return f, step, half, step
 
 
-def _turn(sin: Array, cos: Array, step: Array) -> tuple[Array, Array]:
+def _turn(sin: Real, cos: Real, step: Real) -> tuple[Real, Real]:
     """phi less `step`, to third order in the step and exactly on the circle, without a trigonometric call."""
     h = 0.5 * step
     over = 1 / (1 + h * h)
