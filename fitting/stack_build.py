@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from pathlib import Path
 from typing import Any
 
 from layerlot.solver.materials import Cauchy, Formula, Material, Table, sellmeier
@@ -29,7 +30,7 @@ NM_PER_UM = 1000.0
 
 def build(document: StackDocument, file: str) -> Stack:
     return Stack(
-        title=document.title,
+        title=document.title or Path(file).stem,
         file=file,
         reference_temperature_C=document.reference_temperature_C,
         index_reference=document.index_reference,
