@@ -56,6 +56,8 @@ def svg(figure: Figure) -> str:
     text = re.sub(r"<metadata>.*?</metadata>|<style.*?</style>|<!--.*?-->", "", text, flags=re.DOTALL)
     text = re.sub(r' (?:xmlns(?::xlink)?|version|width|height)="[^"]*"', "", text, count=5)
     text = re.sub(r'<g id="[^"]*"', "<g", text)
-    text = re.sub(r"(\d\.\d\d)\d+", r"\1", text)
+    # Coordinates to a hundredth of a point, in attributes only: what the reader sees keeps its digits.
+    text = re.sub(r'(="-?\d+\.\d\d)\d+"', r'\1"', text)
+    text = re.sub(r' d="[^"]*"', lambda path: re.sub(r"(\d\.\d\d)\d+", r"\1", path[0]), text)
     text = re.sub(r"\s*\n\s*", "\n", text)
     return text.replace("xlink:href", "href").replace("<svg", '<svg aria-hidden="true"', 1)

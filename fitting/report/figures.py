@@ -29,7 +29,7 @@ def measured_predicted(readings: Sequence[FittedReading], quantity: str) -> str:
     used = [r for r in readings if r.used and r.predicted is not None]
     with figure_of(2.5) as figure:
         left, right = figure.add_axes((0.08, 0.17, 0.37, 0.7)), figure.add_axes((0.55, 0.17, 0.43, 0.7))
-        span = [r.reading.value for r in readings]
+        span = [r.reading.value for r in used]
         left.plot([min(span), max(span)], [min(span), max(span)], color="0.6", zorder=1)
         for y in (-2, 0, 2):
             right.axhline(y, color="0.6", linestyle="-" if y == 0 else "--", linewidth=0.6, zorder=1)
@@ -59,8 +59,8 @@ def _stray_marks(axes: Axes, strays: Sequence[float]) -> None:
     top = max(abs(low), abs(high), 3.0)
     axes.set_ylim(-top, top)
     if strays:
-        axes.plot(strays, [-top] * len(strays), "x", color="black", markersize=6, clip_on=False, label="left out")
-        axes.legend(loc="upper right", handletextpad=0.2, borderaxespad=0)
+        (crosses,) = axes.plot(strays, [-top] * len(strays), "x", color="black", markersize=6, clip_on=False)
+        axes.legend([crosses], ["left out"], loc="upper right", handletextpad=0.2, borderaxespad=0)
 
 
 def residuals_by_mode(result: FitResult) -> str | None:

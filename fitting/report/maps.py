@@ -51,28 +51,28 @@ def _one_map(axes: Axes, placed: Sequence[SiteResult], column: Column) -> None:
     size = 8.5 if len(placed) <= 60 else 5
     _marks(axes, [(s.x_mm or 0.0, s.y_mm or 0.0, s.status, e) for s, e in found], known, size)
     if len(placed) <= MAP_TEXT_AT_MOST:
-        below = offset_copy(axes.transData, axes.figure, y=-size * 0.6, units="points")  # type: ignore[arg-type]
+        below = offset_copy(axes.transData, axes.figure, y=-size * 0.78, units="points")  # type: ignore[arg-type]
         style: Any = {"transform": below, "ha": "center", "va": "top", "fontsize": 5.5 if len(placed) > 25 else 7}
         digits = _map_digits(known)
         for s, e in found:
             if e is not None:
                 axes.text(s.x_mm or 0.0, s.y_mm or 0.0, format_number(e.value, digits), **style)
     axes.set_aspect("equal", adjustable="datalim")
-    axes.margins(0.12)
+    axes.margins(0.2)
     axes.set(xlabel="x (mm)", ylabel="y (mm)")
 
 
 def _map_digits(known: Sequence[Estimate]) -> int:
-    """One digit of U is enough on a map."""
-    widest = max((e.u for e in known), default=0.0)
-    return max(places(COVERAGE * widest) - 1, 0) if widest > 0 else 6
+    """One digit of the usual U is enough on a map."""
+    usual = sorted(e.u for e in known)[len(known) // 2] if known else 0.0
+    return max(places(COVERAGE * usual) - 1, 0) if usual > 0 else 6
 
 
 def _scale_words(known: Sequence[Estimate]) -> str:
     n = _map_digits(known)
     low, high = (format_number(f(e.value for e in known), n) for f in (min, max))
-    random = max(e.u_random for e in known)
-    return f"dark {low}, light {high}; random part of U ± {format_u(random, COVERAGE)}"
+    random = sorted(e.u_random for e in known)[len(known) // 2]
+    return f"dark {low}, light {high}; random part of U (median) ± {format_u(random, COVERAGE)}"
 
 
 def _marks(
@@ -150,7 +150,7 @@ def wafer_means(result: FitResult, columns: Sequence[Column]) -> str | None:
             axes.set_title(c.name)
             axes.set_ylabel(unit_mark(c.unit))
             axes.ticklabel_format(axis="y", useOffset=False)
-            axes.set_xlim(-0.6, max(len(rows) - 0.4, 5.6))
+            axes.set_xlim(-0.6, max(len(rows) - 0.4, 3.6))
             names = [r.first.wafer or "" for r in rows] if k == len(shown) - 1 else [""] * len(rows)
             axes.set_xticks(range(len(rows)), names, rotation=90 if len(rows) > 12 else 0)
         return svg(figure)

@@ -41,7 +41,6 @@ from .words import (
     column_of,
     count_words,
     flag_groups,
-    mean_name,
     note_groups,
     place_levels,
     site_name,
@@ -81,7 +80,6 @@ def _parts(result: FitResult) -> Part:
     by_means = not few and bool(several)
     shown = bad[:_LIST_AT_MOST] if by_means else list(result.sites)
     detailed = list(result.sites) if few else bad[:_SITES_IN_DETAIL]
-    wafer_parts = [] if few and len(wafers(result)) == 1 else _wafer_tables(result)
     return {
         "title": result.title,
         "version": result.version,
@@ -94,7 +92,8 @@ def _parts(result: FitResult) -> Part:
         "flags": [_flag(g, few) for g in flag_groups(result)],
         "notes": [_flag(g, few) for g in note_groups(result)],
         "table_figures": _table_figures(result),
-        "wafers": wafer_parts,
+        "wafers": _wafer_tables(result),
+        "wafers_first": len(wafers(result)) <= FEW_WAFERS,
         "details": [_detail(s) for s in detailed],
         "details_more": 0 if few else len(bad) - len(detailed),
         "budgets": [_budget(b) for b in budgets(result.sites)],
@@ -150,9 +149,13 @@ def _site_row(s: SiteResult, levels: Sequence[str], cols: Sequence[Column]) -> P
         "status": s.status.value,
         "state": _STATE[s.status],
         "chi2": "" if fit is None else f"{fit.chi2:.1f} / {fit.dof}",
-        "p": "" if fit is None or fit.p_value is None else f"{fit.p_value:.2g}",
+        "p": "" if fit is None or fit.p_value is None else _probability(fit.p_value),
         "readings": "" if fit is None else _used(fit.readings_used, fit.readings_rejected),
     }
+
+
+def _probability(p: float) -> str:
+    return f"{p:.2g}" if p >= 1e-4 else "< 0.0001"
 
 
 def _used(used: int, rejected: int) -> str:
@@ -175,6 +178,7 @@ def _mean_table(rows: Sequence[MeanRow]) -> Part:
     cols = mean_columns(rows)
     body = []
     for r in rows:
+        spelt_out = r.first.level == "lot" or len(rows) <= FEW_SITES
         cells = []
         for c in cols:
             m = r.cells.get(c)
@@ -185,8 +189,18 @@ def _mean_table(rows: Sequence[MeanRow]) -> Part:
             if m.spread_process is not None:
                 spread += f", of the film {format_u(m.spread_process)}"
             parts = f"random ± {format_u(m.u_random, COVERAGE)}, shared ± {format_u(m.u_shared, COVERAGE)}"
-            cells.append({"text": expanded(m.value, m.u), "number": True, "spread": spread, "parts": parts})
-        body.append({"name": mean_name(r.first), "level": r.first.level, "cells": cells, "sites": _of(r)})
+            cells.append(
+                {"text": expanded(m.value, m.u), "number": True, "spread": spread, "parts": parts if spelt_out else ""}
+            )
+        body.append(
+            {
+                "lot": r.first.lot or "",
+                "wafer": r.first.wafer or "all",
+                "level": r.first.level,
+                "cells": cells,
+                "sites": _of(r),
+            }
+        )
     return {"columns": _heads(cols), "rows": body}
 
 
@@ -214,7 +228,11 @@ def _map_columns(result: FitResult) -> list[Column]:
     return (thick[:1] + [c for c in cols if c.quantity == "index"] + thick[1:])[:2]
 
 
-_SHAPES = "Circle: ok; diamond: flagged; cross: failed, no number."
+def _capital(text: str) -> str:
+    return text[:1].upper() + text[1:]
+
+
+_SHAPES = "Circle: ok; diamond: flagged; cross: failed; white: no number."
 
 
 def _table_figures(result: FitResult) -> list[Part]:
@@ -229,7 +247,7 @@ def _table_figures(result: FitResult) -> list[Part]:
     )  # fmt: skip
     if many:
         for c in cols:
-            text = f"{c.name} over every wafer on one scale. {_SHAPES} The figures stand in the tables of the wafers."
+            text = f"{_capital(c.name)}, all wafers on one scale. {_SHAPES} The figures stand in the wafers' tables."
             out += _figure(wafer_tiles(result, c), f"Maps of {c.name}, wafer by wafer.", text)
         for unit, readings in _by_unit(result.sites):
             out += _fit_figure(readings, unit, "all wafers")
@@ -259,10 +277,8 @@ def _fit_figure(readings: Sequence[FittedReading], unit: str, where: str) -> lis
     used = sum(r.used for r in readings)
     worst = max(abs(z) for r in readings if (z := normalised(r)) is not None)
     alt = f"{where}: {used} readings against the model; the largest normalised residual is {worst:.1f}."
-    words = (
-        f"{where}: {count_words(used, 'reading')} used, {len(readings) - used} left out (crosses). Largest normalised "
-        f"residual {worst:.1f}."
-    )
+    counts = f"{count_words(used, 'reading')} used, {len(readings) - used} left out (crosses)"
+    words = f"{_capital(where)}: {counts}. Largest normalised residual {worst:.1f}."
     return _figure(measured_predicted(readings, _READING_NAME[unit]), alt, words)
 
 
@@ -319,7 +335,7 @@ def _detail(s: SiteResult) -> Part:
 def _fit_words(s: SiteResult) -> str:
     if s.fit is None:
         return "Not fitted."
-    p = "" if s.fit.p_value is None else f", p = {s.fit.p_value:.2g}"
+    p = "" if s.fit.p_value is None else f", p {_probability(s.fit.p_value)}"
     return f"χ² = {s.fit.chi2:.1f} for {s.fit.dof} degrees of freedom{p}."
 
 
@@ -349,7 +365,7 @@ def _rival(s: SiteResult, k: int) -> Part:
     return {
         "site": site_name(s),
         "orders": r.orders,
-        "probability": f"{r.probability:.2g}",
+        "probability": _probability(r.probability),
         "delta": f"{r.delta_chi2:.1f}",
         "numbers": numbers,
     }

@@ -102,7 +102,7 @@ def site_name(site: SiteResult) -> str:
 def wafer_name(lot: str | None, wafer: str | None) -> str:
     """`lot A, wafer W1`."""
     parts = [f"{level} {value}" for level, value in (("lot", lot), ("wafer", wafer)) if value is not None]
-    return ", ".join(parts) or "sites without lot or wafer"
+    return ", ".join(parts) or "wafer without a name"
 
 
 def mean_name(mean: GroupMean) -> str:
