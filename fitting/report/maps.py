@@ -47,7 +47,7 @@ def _one_map(axes: Axes, placed: Sequence[SiteResult], column: Column) -> None:
     found = [(s, by_column(s).get(column)) for s in placed]
     known = [e for _, e in found if e is not None]
     if known:
-        axes.set_title(f"{column.heading}\n{_scale_words(known)}", fontsize=7.5)
+        axes.set_title(f"{column.heading}\n{_scale_words(known)}", fontsize=7)
     size = 8.5 if len(placed) <= 60 else 5
     _marks(axes, [(s.x_mm or 0.0, s.y_mm or 0.0, s.status, e) for s, e in found], known, size)
     if len(placed) <= MAP_TEXT_AT_MOST:
@@ -72,7 +72,7 @@ def _scale_words(known: Sequence[Estimate]) -> str:
     n = _map_digits(known)
     low, high = (format_number(f(e.value for e in known), n) for f in (min, max))
     random = sorted(e.u_random for e in known)[len(known) // 2]
-    return f"dark {low}, light {high}; random part of U (median) ± {format_u(random, COVERAGE)}"
+    return f"dark {low}, light {high}; random U ± {format_u(random, COVERAGE)}"
 
 
 def _marks(

@@ -232,7 +232,7 @@ def _capital(text: str) -> str:
     return text[:1].upper() + text[1:]
 
 
-_SHAPES = "Circle: ok; diamond: flagged; cross: failed; white: no number."
+_SHAPES = "Circle: ok; diamond: flagged; cross: failed; white: no number. Random U: median of the random part of U."
 
 
 def _table_figures(result: FitResult) -> list[Part]:

@@ -39,7 +39,7 @@ def table(sheet):
 
 @pytest.mark.parametrize("name", [*fixtures.ALL])
 def test_sheets_are_ready_to_read(name, tmp_path):
-    """Every sheet has a frozen head in bold, a filter over all rows, wide columns and the head on every printed page."""
+    """Every sheet has a frozen bold head, a filter over all rows, wide columns, the head on every printed page."""
     result = getattr(fixtures, name)()
     book = opened(result, tmp_path)
     assert book.sheetnames == SHEETS
