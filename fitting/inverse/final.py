@@ -75,7 +75,7 @@ def fit_site(problem: SiteProblem, orders: IntArray, theta: Array, prior: Prior)
     start = np.clip(theta, low + 1e-7 * span, high - 1e-7 * span)
     names = [p.name for p in layout.parameters]
     # 1e-9 of chi-squared is far below what any u can resolve
-    s = minimise(cached.residual, cached.jacobian, names, start, low, high, tolerance=1e-9)
+    s = minimise(cached.residual, cached.jacobian, names, start, low, high, tolerance=1e-9, max_evaluations=60)
     lin = cached.look(s.values)
     return _split(problem, orders, s, lin, prior)
 

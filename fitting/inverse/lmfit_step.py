@@ -37,11 +37,13 @@ def minimise(
     low: Array | None = None,
     high: Array | None = None,
     tolerance: float = 1e-14,
+    max_evaluations: int = 2000,
 ) -> Solution:
     """Least squares of residual(x) (n) with Jacobian d residual / dx (n, p), x of length p, from `start`, low <= x <=
     high.
 
     tolerance: relative, on the fall of the sum of squares; the default asks for all that double precision gives.
+    max_evaluations: of the residual, after which the fit counts as not converged.
     Raises ValueError if the start lies outside the bounds or a residual there is not finite.
     """
     import lmfit
@@ -64,7 +66,13 @@ def minimise(
     fitter = lmfit.Minimizer(
         lambda p: residual(vector(p)), parameters, scale_covar=False, calc_covar=False, nan_policy="propagate"
     )
-    out = fitter.leastsq(Dfun=lambda p: jacobian(vector(p)), ftol=tolerance, xtol=max(1e-12, tolerance), gtol=0.0)
+    out = fitter.leastsq(
+        Dfun=lambda p: jacobian(vector(p)),
+        max_nfev=max_evaluations,
+        ftol=tolerance,
+        xtol=max(1e-12, tolerance),
+        gtol=0.0,
+    )
     x = vector(out.params)
     r, jac = residual(x), jacobian(x)
     # MINPACK's codes 1 to 3 are convergence; 6 to 8 say that the tolerance is below what rounding allows: a minimum
