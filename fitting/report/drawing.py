@@ -11,9 +11,10 @@ from typing import TYPE_CHECKING
 if TYPE_CHECKING:
     from matplotlib.figure import Figure
 
-# Dark enough for print in black and white, apart for colour-blind eyes; a marker's shape says the same as its colour.
+# One colour and one shape a wavelength: dark enough for print in black and white, apart for colour-blind eyes. Filled
+# is TE, open is TM.
 COLOURS = ("#10405f", "#c4570a", "#3f7f5f", "#7b3f87")
-MARKS = {"TE": "o", "TM": "^"}
+MARKS = ("o", "s", "^", "D")
 _WIDTH_IN = 7.2
 _STYLE = {
     "svg.fonttype": "none",

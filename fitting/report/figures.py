@@ -33,8 +33,8 @@ def measured_predicted(readings: Sequence[FittedReading], quantity: str) -> str:
         left.plot([min(span), max(span)], [min(span), max(span)], color="0.6", zorder=1)
         for y in (-2, 0, 2):
             right.axhline(y, color="0.6", linestyle="-" if y == 0 else "--", linewidth=0.6, zorder=1)
-        for pol, mark in MARKS.items():
-            for w, colour in zip(waves, COLOURS * 4):
+        for pol in ("TE", "TM"):
+            for w, colour, mark in zip(waves, COLOURS * 4, MARKS * 4):
                 mine = [r for r in used if r.reading.pol == pol and wavelength_nm(r) == w]
                 if not mine:
                     continue
@@ -120,7 +120,7 @@ def site_residuals(site: SiteResult) -> str | None:
                 axes.plot(i, 0, "x", color="black", markersize=7, markeredgewidth=1.4)
                 continue
             axes.plot([i, i], [0, z], color="0.25", linewidth=1)
-            axes.plot(i, z, MARKS[r.reading.pol], color="black", markersize=5,
+            axes.plot(i, z, MARKS[0], color="black", markersize=5,
                       markerfacecolor="black" if r.reading.pol == "TE" else "white")  # fmt: skip
         names = [f"{mode_name(r)}\n{wavelength_nm(r):g}" for r in site.readings]
         axes.set_xticks(range(len(names)), names, fontsize=7 if len(names) <= 14 else 5.5)

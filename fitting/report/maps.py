@@ -146,7 +146,7 @@ def wafer_means(result: FitResult, columns: Sequence[Column]) -> str | None:
                     continue
                 for u, thick in ((m.u, 0.9), (m.u_random, 3.2)):
                     axes.plot([i, i], [m.value - COVERAGE * u, m.value + COVERAGE * u], color="black", linewidth=thick)
-                axes.plot(i, m.value, "o", color="black", markerfacecolor="white", markersize=4)
+                axes.plot(i, m.value, "_", color="black", markersize=9)
             axes.set_title(c.name)
             axes.set_ylabel(unit_mark(c.unit))
             axes.ticklabel_format(axis="y", useOffset=False)

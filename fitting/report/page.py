@@ -148,7 +148,7 @@ def _site_row(s: SiteResult, levels: Sequence[str], cols: Sequence[Column]) -> P
         "cells": [_cell(found.get(c), "not determined" if found else "no answer") for c in cols],
         "status": s.status.value,
         "state": _STATE[s.status],
-        "chi2": "" if fit is None else f"{fit.chi2:.1f} / {fit.dof}",
+        "chi2": "" if fit is None else f"{fit.chi2:.1f} ({fit.dof})",
         "p": "" if fit is None or fit.p_value is None else _probability(fit.p_value),
         "readings": "" if fit is None else _used(fit.readings_used, fit.readings_rejected),
     }
@@ -242,8 +242,8 @@ def _table_figures(result: FitResult) -> list[Part]:
     cols = _map_columns(result)
     out += _figure(
         wafer_means(result, cols), "Means of each wafer; the figures stand in the table of means.",
-        "Wafer by wafer: grey dots, sites; ring, mean; thin bar, U of the mean; thick bar, its random part. Two wafers "
-        "measured on one instrument are as uncertain against each other as their thick bars say.",
+        "Wafer by wafer: grey dots, sites; cross-bar, mean; thin bar, U of the mean; thick bar, its random part. Two "
+        "wafers measured on one instrument are as uncertain against each other as their thick bars say.",
     )  # fmt: skip
     if many:
         for c in cols:
@@ -251,7 +251,10 @@ def _table_figures(result: FitResult) -> list[Part]:
             out += _figure(wafer_tiles(result, c), f"Maps of {c.name}, wafer by wafer.", text)
         for unit, readings in _by_unit(result.sites):
             out += _fit_figure(readings, unit, "all wafers")
-    what = "dot, mean; bar, one standard deviation either way; expected: 0 and ±1 (dashed). A mean away from 0 "
+    what = (
+        "dot, mean; bar, one standard deviation either way; expected: mean 0, bar up to ±1 (dashed), shorter where a fit "
+        "has few readings to spare. A mean away from 0 "
+    )
     if len(result.sites) > 2:
         out += _figure(
             residuals_by_mode(result), "Mean and scatter of the normalised residuals of each mode.",
@@ -320,14 +323,14 @@ def _detail(s: SiteResult) -> Part:
                 "measured": with_unit(format_number(r.reading.value, n), unit),
                 "predicted": "" if r.predicted is None else with_unit(format_number(r.predicted, n), unit),
                 "u": with_unit(f"{r.u:.2g}", unit),
-                "z": "" if z is None else f"{z:+.2f}".replace("-", "−"),
+                "z": "" if z is None else f"{z:+.2f}",
                 "remark": r.reason or "",
                 "used": r.used,
                 "place": str(r.reading.place),
             }
         )
     alt = f"Normalised residuals of {site_name(s)}; the figures stand in the table."
-    figures = _figure(site_residuals(s), alt, "Normalised residuals: dots TE, triangles TM, crosses readings left out.")
+    figures = _figure(site_residuals(s), alt, "Normalised residuals: filled TE, open TM, crosses readings left out.")
     return {"name": site_name(s), "state": _STATE[s.status], "status": s.status.value, "rows": rows, "figures": figures,
             "flags": [f.text for f in s.flags], "fit": _fit_words(s)}  # fmt: skip
 
@@ -386,7 +389,7 @@ def _shared(e: Estimate) -> Part:
     stated = moved = "none stated"
     if e.prior is not None:
         stated = with_unit(format_value(e.prior[0], e.prior[1], COVERAGE), e.unit)
-        moved = f"{(e.value - e.prior[0]) / e.prior[1]:+.2f} u".replace("-", "−") if e.prior[1] > 0 else ""
+        moved = f"{(e.value - e.prior[0]) / e.prior[1]:+.2f} u" if e.prior[1] > 0 else ""
     return {
         "name": column_of(e).name,
         "stated": stated,

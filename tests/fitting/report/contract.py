@@ -11,6 +11,7 @@ QUANTITIES = {
     "index", "thickness", "width", "width_bias", "etch_depth", "sidewall", "effective_index", "group_index", "loss",
     # nuisances: "plus nuisance ones you add"
     "index_shift", "prism_index", "prism_index_TE", "prism_index_TM", "base_angle", "angle_offset",
+    "prism_index_shift", "prism_index_shift_TE", "prism_index_shift_TM",
 }  # fmt: skip
 TEXT, NUMBER, WHOLE, FLAG = (str,), (int, float), (int,), (bool,)
 TOP = {"schema": TEXT, "version": TEXT, "inputs": (list,), "sites": (list,)}
