@@ -144,7 +144,7 @@ def _site_row(s: SiteResult, levels: Sequence[str], cols: Sequence[Column]) -> P
     found = by_column(s)
     fit = s.fit
     return {
-        "place": [getattr(s, level) or "" for level in levels] or ["whole table"],
+        "place": [getattr(s, level) or "" for level in levels] or ["all readings"],
         "cells": [_cell(found.get(c), "not determined" if found else "no answer") for c in cols],
         "status": s.status.value,
         "state": _STATE[s.status],
@@ -154,8 +154,8 @@ def _site_row(s: SiteResult, levels: Sequence[str], cols: Sequence[Column]) -> P
     }
 
 
-def _probability(p: float) -> str:
-    return f"{p:.2g}" if p >= 1e-4 else "< 0.0001"
+def _probability(p: float, equals: str = "") -> str:
+    return f"{equals}{p:.2g}" if p >= 1e-4 else "< 0.0001"
 
 
 def _used(used: int, rejected: int) -> str:
@@ -252,8 +252,8 @@ def _table_figures(result: FitResult) -> list[Part]:
         for unit, readings in _by_unit(result.sites):
             out += _fit_figure(readings, unit, "all wafers")
     what = (
-        "dot, mean; bar, one standard deviation either way; expected: mean 0, bar up to ±1 (dashed), shorter where a fit "
-        "has few readings to spare. A mean away from 0 "
+        "dot, mean; bar, one standard deviation either way; expected: mean 0, bar up to ±1 (dashed), shorter where a "
+        "fit has few readings to spare. A mean away from 0 "
     )
     if len(result.sites) > 2:
         out += _figure(
@@ -338,7 +338,7 @@ def _detail(s: SiteResult) -> Part:
 def _fit_words(s: SiteResult) -> str:
     if s.fit is None:
         return "Not fitted."
-    p = "" if s.fit.p_value is None else f", p {_probability(s.fit.p_value)}"
+    p = "" if s.fit.p_value is None else f", p {_probability(s.fit.p_value, '= ')}"
     return f"χ² = {s.fit.chi2:.1f} for {s.fit.dof} degrees of freedom{p}."
 
 

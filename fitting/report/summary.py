@@ -74,7 +74,7 @@ def _site_table(sites: Sequence[SiteResult]) -> list[str]:
     for s in sites:
         found = by_column(s)
         cells = [_answer(found.get(c)) for c in cols] if found else ["no answer"] * len(cols)
-        place = [getattr(s, level) or "" for level in levels] or ["whole table"]
+        place = [getattr(s, level) or "" for level in levels] or ["all readings"]
         rows.append(place + cells + [STATUS[s.status]])
     if not cols:
         return [f"{site_name(s)}: no answer, {STATUS[s.status]}" for s in sites]

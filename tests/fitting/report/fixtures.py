@@ -195,7 +195,7 @@ def bad():
     sites.append(
         site(
             "2", poor, [estimate("index", 1.9932, 0.0019, 0.0003, nm=632.8), estimate("thickness", 399.1, 1.8, 0.3)],
-            flags=[flag("poor_fit", "chi-squared 61.3 for 2, factor 5.54.")],
+            flags=[flag("poor_fit", "chi-squared 39.2 for 2, factor 4.43.")],
             notes=[flag("reading_rejected", f"row 13: TE 31.02 {remark}")], x=35.0, y=0.0,
         )
     )  # fmt: skip
