@@ -30,6 +30,7 @@ _MAX_STEPS = 40
 # Newton from the companion's root may move N by its coupling to the half-space; more than this share of the distance
 # to the neighbouring order would be another mode.
 _FARTHEST_SHARE = 0.5
+_ROUNDING = 1e-15
 DB_PER_NEPER = 20 / np.log(10)
 
 
@@ -180,6 +181,8 @@ def leaky_index(
         outgoing = _radiates(stack, seed[known])
         root, done = polish(stack, seed[known].astype(complex), outgoing)
         stays = done & (np.abs(root.real - seed[known]) < _FARTHEST_SHARE * step[known])
+        # A leak below rounding must not come out as gain.
+        root = np.where((root.imag > 0) & (root.imag < _ROUNDING), root.real + 0j, root)
         out[known] = np.where(stays, root, np.nan)
     return out.reshape(shape)
 
