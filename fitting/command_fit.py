@@ -12,6 +12,7 @@ from contextlib import contextmanager
 from dataclasses import replace
 from pathlib import Path
 from types import FrameType
+from typing import TYPE_CHECKING
 
 import click
 
@@ -19,13 +20,15 @@ from .output import RESULTS, folder_faults, write_folder
 from .records import Fault, FitResult, InputFile, InputRefused, Place, Status
 from .stack import Stack, load_stack
 
+if TYPE_CHECKING:
+    from .importers import Imported
+
 DEMO_STACK, DEMO_DATA = "nitride_on_silica.toml", "monitor_wafers.xlsx"
 
 
 def run_fit(stack_file: Path, data: Sequence[Path], out: Path, workers: int | None, as_json: bool) -> int:
     """Fit and write; returns the exit status. Raises InputRefused with the faults of stack, data and folder."""
-    result = _fit(stack_file, data, folder_faults(out), workers or _cores())
-    _write(result, out)
+    result = _fit_and_write(stack_file, data, out, folder_faults(out), workers or _cores())
     if as_json:
         click.echo((out / RESULTS).read_text(encoding="utf-8"), nl=False)
     else:
@@ -49,39 +52,53 @@ def run_demo(out: Path, workers: int | None) -> int:
         out.mkdir(parents=True, exist_ok=True)
         for name in inputs:
             shutil.copyfile(shipped / name, out / name)
-    result = _fit(out / DEMO_STACK, [out / DEMO_DATA], [], workers or _cores())
-    _write(result, out)
+    result = _fit_and_write(out / DEMO_STACK, [out / DEMO_DATA], out, [], workers or _cores())
     click.echo("The shipped lot is invented: its maker, films and numbers exist nowhere.\n")
     _tell(result, out)
     click.echo(f"Inputs: {out / DEMO_STACK}, {out / DEMO_DATA}")
     return _status(result)
 
 
-def _fit(stack_file: Path, data: Sequence[Path], faults: list[Fault], workers: int) -> FitResult:
+def _fit_and_write(
+    stack_file: Path, data: Sequence[Path], out: Path, faults: Sequence[Fault], workers: int
+) -> FitResult:
+    stack, imported, inputs = _read(stack_file, data, faults)
+    from .inverse import fit_table
+
+    # An interrupt while the reports are written must not cost the fit: it is over, and they follow at once.
+    with _stop_on_interrupt() as should_stop:
+        with _progress() as progress:
+            fitted = fit_table(stack, imported.readings, workers=workers, progress=progress, should_stop=should_stop)
+        if fitted.interrupted:
+            click.echo("Stopped before the last site: the reports hold what was done.", err=True)
+        result = replace(fitted, inputs=inputs, skipped_rows=imported.skipped)
+        _write(result, out)
+    return result
+
+
+def _read(
+    stack_file: Path, data: Sequence[Path], faults: Sequence[Fault]
+) -> tuple[Stack, Imported, tuple[InputFile, ...]]:
+    """Stack, tables and the list of input files. Raises InputRefused with the given faults and those of both."""
     from .importers import read_tables
 
     stack: Stack | None = None
+    found: list[Fault] = []
     try:
         stack = load_stack(stack_file)
     except InputRefused as refused:
-        faults = [*refused.faults, *faults]
+        found += refused.faults
     imported = read_tables(data)
-    faults = [*faults, *imported.faults]
+    found += [*faults, *imported.faults]
     if not imported.readings and not imported.faults:
         place = Place(", ".join(str(p) for p in data))
-        faults.append(
+        found.append(
             Fault(place, "no readings", "a table with one reading at least is required", "see layerlot inspect")
         )
-    if faults or stack is None:
-        raise InputRefused(faults)
+    if found or stack is None:
+        raise InputRefused(found)
     stack_input = InputFile(str(stack_file), hashlib.sha256(stack_file.read_bytes()).hexdigest())
-    from .inverse import fit_table
-
-    with _stop_on_interrupt() as should_stop, _progress() as progress:
-        result = fit_table(stack, imported.readings, workers=workers, progress=progress, should_stop=should_stop)
-    if result.interrupted:
-        click.echo("Stopped before the last site: the reports hold what was done.", err=True)
-    return replace(result, inputs=(stack_input, *imported.inputs), skipped_rows=imported.skipped)
+    return stack, imported, (stack_input, *imported.inputs)
 
 
 def _write(result: FitResult, out: Path) -> None:
