@@ -14,7 +14,7 @@ FLAGS: dict[str, str] = {
     "prism_below_film": "The prism index does not exceed the film's: the lowest modes cannot be coupled. Use a prism "
     "of higher index, or narrow the film's index window if it is known to be lower.",
     "loose_direction": "The readings leave a combination of the unknowns undetermined.",
-    "order_ambiguous": "More than one assignment of mode numbers fits. See the rivals for what would settle it.",
+    "order_ambiguous": "More than one assignment of mode numbers fits; the others are listed as rivals.",
     "label_doubtful": "The mode numbers as typed do not fit, others do. Check the labels.",
     "polarisation_doubtful": "All readings fit if TE and TM are exchanged. Check the polarisation column.",
     "poor_fit": "The readings scatter more than their stated uncertainty allows; uncertainties have been enlarged.",

@@ -236,6 +236,8 @@ def conventions(stack: Stack) -> tuple[str, ...]:
         f"Wavelengths as typed are wavelengths in {medium[stack.wavelength_reference]}.",
         f"Indices as typed and as reported are relative to {medium[stack.index_reference]}.",
     ]
+    if stack.prism is not None:
+        out.append("Coupling angles are taken in that same medium: its index at the entrance face counts as 1.")
     if stack.reference_temperature_C is None:
         out.append("No reference temperature is stated; material constants hold at the temperature of their source.")
     else:

@@ -8,6 +8,7 @@ from dataclasses import dataclass, field, replace
 import numpy as np
 
 from ..flags import flag
+from ..observables.film import predict
 from ..records import Array, Flag, IntArray
 from . import candidates as cand
 from .assignment import FAR, LABEL_PRICE, Assignment, rank, stray_price
@@ -16,6 +17,8 @@ from .problem import SiteProblem, stack_sites
 
 # A fit less likely than this is called poor (common practice, no source).
 POOR = 1e-3
+# A reading decides between two films if their modes lie this many u apart there.
+_DECIDES = 5.0
 # Orders are certain when all rivals together have less than this; below the second limit no number is given.
 AMBIGUOUS = 0.002
 UNDECIDED = 0.2
@@ -158,10 +161,36 @@ def _judge(problem: SiteProblem, out: Settled, best: Assignment, labelled: bool)
             out.withhold = True
     doubt = 1 - best.probability
     if doubt > AMBIGUOUS:
-        out.flags.append(flag("order_ambiguous", f"The best one has probability {best.probability:.3f}."))
+        decide = _deciding_reading(problem, best, out.rivals[0]) if out.rivals else ""
+        out.flags.append(flag("order_ambiguous", f"The best one has probability {best.probability:.3f}.{decide}"))
         out.withhold |= doubt > UNDECIDED
     elif not labelled:
         out.notes.append(flag("orders_found"))
+
+
+def _deciding_reading(problem: SiteProblem, best: Assignment, rival: Assignment) -> str:
+    """The unread mode of the best film that lies farthest from every mode of the rival's."""
+    layout, data = problem.layout, problem.data
+    films = np.array([best.theta, rival.theta])
+    most = int(max(best.orders.max(), rival.orders.max())) + 2
+    found: tuple[float, str] = (0.0, "")
+    for c in np.unique(data.context[0]):
+        first = int(np.flatnonzero(data.context[0] == c)[0])
+        row = replace(
+            data, context=np.full((1, most), c), is_angle=np.full((1, most), data.is_angle[0, first]),
+            measured=np.zeros((1, most)), u=np.full((1, most), data.u[0, first]), valid=np.ones((1, most), dtype=bool),
+        )  # fmt: skip
+        modes = predict(layout, row, films, np.tile(np.arange(most), (2, 1)))
+        taken = set(best.orders[data.context[0] == c].tolist())
+        there = modes.value[1][modes.exists[1]]
+        for m in np.flatnonzero(modes.exists[0]):
+            gap = float(np.abs(modes.value[0, m] - there).min()) if there.size else 90.0
+            gap /= float(row.u[0, 0])
+            if int(m) not in taken and gap > max(found[0], _DECIDES):
+                reading = problem.readings[first]
+                text = f"{reading.pol}{m} at {reading.wavelength_um * 1000:g} nm, near {modes.value[0, m]:.3f}"
+                found = (gap, f" A reading of {text}, would decide: the first rival has no mode there.")
+    return found[1]
 
 
 def _explain_strays(problem: SiteProblem, out: Settled, best: Assignment) -> None:
@@ -170,10 +199,10 @@ def _explain_strays(problem: SiteProblem, out: Settled, best: Assignment) -> Non
     for r in np.flatnonzero(best.orders < 0):
         reading = problem.readings[r]
         hint = _whole_degree(problem, best, int(r), float(price[r])) if problem.data.is_angle[0, r] else ""
-        text = f"fits no mode of this film{hint}"
+        text = f"fits no mode of this film{hint or '.'}"
         out.remarks[int(r)] = text
         where = f"row {reading.place.row}" if reading.place.row is not None else "reading"
-        out.notes.append(flag("reading_rejected", f"{where}: {reading.pol} {reading.value:g} {text}."))
+        out.notes.append(flag("reading_rejected", f"{where}: {reading.pol} {reading.value:g} {text}"))
 
 
 def _whole_degree(problem: SiteProblem, best: Assignment, r: int, price: float) -> str:

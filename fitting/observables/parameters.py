@@ -263,7 +263,6 @@ def _spec(builder: _Builder, stack: Stack, spec: IndexSpec, layer: str, axis: st
     fixed = float(stack.index_typed(inside, vacuum))
     row: dict[int, float] = {}
     if spec.shift is not None:
-        # The material's index already holds an exact shift; only an unknown one adds a column.
         make = base | {
             "name": f"index_shift:{layer}:{axis}",
             "label": f"index shift of {layer}{along}",
@@ -341,5 +340,9 @@ def _prism(builder: _Builder, stack: Stack, prism: Prism, c: Context) -> Row:
     fixed = float(stack.index_typed(spec.index_inside(stack, vacuum, c.temperature_C), vacuum))
     if spec.shift is None:
         return fixed, {}
-    extra, row = _quantity(builder, spec.shift, make | {"name": f"prism_shift{suffix}"})
+    shift = {
+        "name": f"prism_shift{suffix}", "label": f"shift of the prism index{suffix.replace('_', ' ')}",
+        "quantity": f"prism_index_shift{suffix}",
+    }  # fmt: skip
+    extra, row = _quantity(builder, spec.shift, make | shift)
     return fixed + extra, row

@@ -143,3 +143,16 @@ def test_every_number_carries_its_uncertainty():
         assert e.u > 0 and e.low95 < e.value < e.high95
         assert np.isclose(e.u**2, e.u_random**2 + e.u_shared**2, rtol=1e-9)
     assert PRISM - 0.001 < next(e.value for e in result.shared if e.quantity == "prism_index") < PRISM + 0.001
+
+
+def test_ambiguity_names_the_reading_that_would_settle_it():
+    """The flag on doubtful orders names an unread mode, and with that reading the first rival is gone."""
+    rows = film(1.98, 0.9)
+    site = fit(unlabelled(rows[1:3]), thickness="{ fit = [200, 2000] }")
+    text = flag_text(site, "order_ambiguous")
+    assert "would decide" in text
+    named = text.split("A reading of ")[1].split(" at ")[0]
+    extra = next(r for r in rows if f"{r[0]}{r[1]}" == named)
+    again = fit(unlabelled([*rows[1:3], extra]), thickness="{ fit = [200, 2000] }")
+    first = max(site.rivals, key=lambda r: r.probability).orders
+    assert not any(r.orders.startswith(first) and "stray" not in r.orders for r in again.rivals)
