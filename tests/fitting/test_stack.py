@@ -176,14 +176,15 @@ def test_reference_temperature_reaches_the_material() -> None:
 def test_conventions_name_reference_and_source() -> None:
     """The sentences for the report name both references, the temperature and each material's source."""
     sentences = conventions(parse_stack(in_air("index_reference"), "x"))
-    assert sentences[:3] == (
+    assert sentences[:4] == (
         "Wavelengths as typed are wavelengths in vacuum.",
         "Indices as typed and as reported are relative to dry air at 22 °C and 101325 Pa.",
+        "Coupling angles are taken in that same medium: its index at the entrance face counts as 1.",
         "Readings without a temperature of their own are taken at 22 °C.",
     )
-    assert len(sentences) == 4
-    assert sentences[3].startswith("Index of substrate: fused silica, I. H. Malitson, J. Opt. Soc. Am. 55, 1205 (1965)")
-    assert sentences[3].endswith("Table 1.")
+    assert len(sentences) == 5
+    assert sentences[4].startswith("Index of substrate: fused silica, I. H. Malitson, J. Opt. Soc. Am. 55, 1205 (1965)")
+    assert sentences[4].endswith("Table 1.")
 
 
 def test_file_is_read_with_a_byte_order_mark(tmp_path: Path) -> None:
