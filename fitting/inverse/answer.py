@@ -49,7 +49,7 @@ def answer(problem: SiteProblem, settled: Settled, prior: Prior, shared: Shared)
     withheld = rank.touched.copy()
     quality = _quality(settled.orders, fit)
     blocked = _block(problem, fit, rank, flags) or settled.withhold
-    enlarge = _misfit(quality, flags)
+    enlarge = 1.0 if blocked else _misfit(quality, flags)
     if not rank.directions and quality.dof == 0:
         notes.append(flag("no_redundancy"))
     if blocked:
@@ -86,7 +86,7 @@ def _block(problem: SiteProblem, fit: SiteFit, rank: Rank, flags: list[Flag]) ->
     if held.any():
         names = [p.label for p, h in zip(problem.layout.parameters, held, strict=True) if h]
         flags.append(flag("at_window_edge", f"Held by its window: {' and '.join(names)}."))
-    if not fit.success:
+    if not fit.success and len(flags) == before and not rank.directions:
         flags.append(flag("not_converged"))
     below = _prism_below(problem, fit)
     if below:

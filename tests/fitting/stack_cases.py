@@ -114,15 +114,15 @@ CASES: dict[str, tuple[str, str, str]] = {
         'column layer[3].index: "unobtainium", the name of a material in the catalogue is required, known '
         "are: N-BK7; N-SF11; N-SF6; SF6; air; fused silica; gadolinium gallium garnet; gallium arsenide; "
         "lithium niobate, extraordinary; lithium niobate, ordinary; rutile, extraordinary; rutile, "
-        "ordinary; sapphire, extraordinary; sapphire, ordinary; silicon (Li 1980); silicon (Salzberg and "
-        "Villa 1957); silicon nitride (Luke 2015); silicon nitride (Philipp 1973)",
+        "ordinary; sapphire, extraordinary; sapphire, ordinary; silicon (Green 2008); silicon (Li 1980); "
+        "silicon (Salzberg and Villa 1957); silicon nitride (Luke 2015); silicon nitride (Philipp 1973)",
     ),
     "material by half its name": (
         COVER,
         'index = "silicon"',
         'column layer[3].index: "silicon", the name of a material in the catalogue is required, did you '
-        "mean silicon (Salzberg and Villa 1957) or silicon (Li 1980) or silicon nitride (Philipp 1973) or "
-        "silicon nitride (Luke 2015)?",
+        "mean silicon (Salzberg and Villa 1957) or silicon (Li 1980) or silicon (Green 2008) or silicon "
+        "nitride (Philipp 1973) or silicon nitride (Luke 2015)?",
     ),
     "material misspelt": (
         '"fused silica"',
