@@ -29,7 +29,6 @@ NOTES: dict[str, str] = {
     "reading_rejected": "A reading that fits no mode was left out.",
     "no_redundancy": "There are as many unknowns as readings: the fit cannot be checked by its residuals.",
     "not_parabolic": "An interval is not symmetric about its value; it was found from the likelihood itself.",
-    "leaky": "The substrate has a higher index than the film: the modes leak into it, and the real part is fitted.",
     "orders_found": "Mode numbers were missing and have been found from the readings.",
 }
 

@@ -19,7 +19,7 @@ from ..observables.film import FilmReadings
 from ..observables.parameters import Layout
 from ..records import Array, IntArray
 from . import candidates as cand
-from .descent import Descent, Prior, descend
+from .descent import Descent, Prior, descend, linearise
 
 STRAY_SHARE = 0.02
 SKIP_PRICE = 2 * np.log(1 / 0.03)
@@ -71,7 +71,30 @@ def rank(layout: Layout, data: FilmReadings, label: IntArray, prior: Prior) -> l
         orders, first = np.unique(again, axis=0, return_index=True)
         theta = theta[first]
     orders, fit = _drop_strays(layout, data, orders, theta, prior)
+    back = _take_back(sc, data, orders, fit)
+    if not np.array_equal(back, orders):
+        orders, first = np.unique(back, axis=0, return_index=True)
+        fit = descend(layout, data, orders, fit.theta[first], prior, max_steps=20, tolerance=1e-5)
     return _priced(sc, data, orders, fit)
+
+
+def _take_back(sc: cand.Scene, data: FilmReadings, orders: IntArray, fit: Descent) -> IntArray:
+    """Strays that the refined film does have as a mode after all, by its own prediction and not by the closed
+    companion's."""
+    if not (orders < 0).any():
+        return orders
+    near = np.where(sc.label >= 0, sc.label, np.maximum(np.round(cand.continuous_order(sc, fit.theta)), 0))
+    near = np.nan_to_num(near, nan=-1.0).astype(int)
+    out = orders.copy()
+    for shift in (0, 1, -1):
+        trial = np.where(out < 0, np.maximum(near + np.where(sc.label >= 0, 0, shift), 0), out)
+        lin = linearise(sc.layout, data, fit.theta, trial)
+        fits = (out < 0) & lin.exists & (lin.residual**2 < SUSPECT)
+        for a, r in zip(*np.nonzero(fits), strict=True):
+            same = (sc.tm == sc.tm[r]) & (sc.wave == sc.wave[r])
+            if trial[a, r] not in out[a, same]:
+                out[a, r] = trial[a, r]
+    return out
 
 
 def _hopeful(data: FilmReadings, orders: IntArray, fit: Descent) -> IntArray:

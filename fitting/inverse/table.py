@@ -32,6 +32,7 @@ B = TypeVar("B")
 
 Progress = Callable[[int, int], None]
 _CHUNK = 32
+_LEAKY = "A half-space has a higher index than the film: the modes leak into it, and the real part of N is fitted."
 # A shared quantity this many of its own standard uncertainties from its stated value is not chance.
 FAR_FROM_PRIOR = 3.5
 
@@ -69,7 +70,8 @@ def fit_table(
             if stop():
                 break
     answers += [unanswered(p, [flag("interrupted")]) for p in problems[len(answers) :]]
-    return _result(stack, answers, shared, interrupted=len(answers) > len(jobs) or _any_interrupted(answers))
+    notes = tuple(_LEAKY for p in problems[:1] if p.layout.leaks())
+    return _result(stack, answers, notes, shared, interrupted=len(answers) > len(jobs) or _any_interrupted(answers))
 
 
 def _any_interrupted(answers: Sequence[SiteAnswer]) -> bool:
@@ -130,7 +132,9 @@ def _determined(problem: SiteProblem, s: Settled) -> bool:
     return bool(inside) and int((s.orders >= 0).sum()) >= int(fitted.sum())
 
 
-def _result(stack: Stack, answers: Sequence[SiteAnswer], shared: Shared, *, interrupted: bool) -> FitResult:
+def _result(
+    stack: Stack, answers: Sequence[SiteAnswer], notes: tuple[str, ...], shared: Shared, *, interrupted: bool
+) -> FitResult:
     estimates = _shared_estimates(shared)
     sites = tuple(a.result for a in answers)
     means = group_means(sites, [a.numbers for a in answers], shared.covariance, [a.trusted for a in answers])
@@ -142,7 +146,7 @@ def _result(stack: Stack, answers: Sequence[SiteAnswer], shared: Shared, *, inte
         means=means,
         shared=estimates,
         shared_flags=_pulled(shared, estimates),
-        conventions=conventions(stack),
+        conventions=(*conventions(stack), *notes),
         interrupted=interrupted,
     )
 

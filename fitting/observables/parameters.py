@@ -93,6 +93,11 @@ class Layout:
     def fitted(self) -> BoolArray:
         return np.array([p.fitted for p in self.parameters], dtype=bool)
 
+    def leaks(self) -> bool:
+        """Whether the stack at its start values has a half-space of at least the films' index."""
+        n = self.n_fixed + self.n_map @ self.starts()
+        return bool((np.maximum(n[:, 0], n[:, -1]) >= n[:, 1:-1].max(axis=1)).all())
+
     def bounds(self) -> tuple[Array, Array]:
         return np.array([p.low for p in self.parameters]), np.array([p.high for p in self.parameters])
 
