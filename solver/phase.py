@@ -20,6 +20,9 @@ from numpy.typing import NDArray
 from .layers import SMALLEST_WAVE_NUMBER, Array, Layers
 
 _TINY = 1e-300
+# Decay, in k0, of a half-space at its own light line: far below the rounding of a - q b, which would hide modes that
+# have just appeared.
+_NO_DECAY = 1e-30
 
 
 def wave_numbers(layers: Layers, q: Array) -> tuple[Array, NDArray[np.bool_]]:
@@ -107,12 +110,16 @@ def _step(
     return turned, wron / stretch, log_r2 + np.log(stretch)
 
 
-def total_phase(layers: Layers, q: Array) -> tuple[Array, Array, NDArray[np.intp]]:
+def total_phase(layers: Layers, q: Array, *, at_cut_off: bool = False) -> tuple[Array, Array, NDArray[np.intp]]:
     """Phase in the flattest oscillating layer, its slope in q, and which interior layer that is.
 
-    Mode m lies where the phase is (m + 1) pi. Shapes (B,). q must lie below the stack's ceiling.
+    Mode m lies where the phase is (m + 1) pi. Shapes (B,). q must lie below the stack's ceiling. at_cut_off: q is the
+    stack's cut-off, where the half-space that stops guiding first does not decay.
     """
     s, osc = wave_numbers(layers, q)
+    if at_cut_off:
+        ends = [0, -1]
+        s[ends] = np.where(layers.a[ends] / layers.b[ends] >= q, _NO_DECAY, s[ends])
     up, up_wron, _ = sweep(layers, s, osc, upward=True)
     down, down_wron, _ = sweep(layers, s, osc, upward=False)
     si, wi, bi = s[1:-1], layers.w[1:-1], layers.b[1:-1]

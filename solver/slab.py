@@ -21,8 +21,9 @@ from .phase import total_phase
 from .three_layer import three_layer_index
 
 _MAX_STEPS = 120
-# Two units in the last place of q: Newton cannot do better than the rounding of n^2 - N^2.
-_Q_TOLERANCE = 4.5e-16
+# Four units in the last place of q and of the phase: Newton cannot do better than the rounding of n^2 - N^2 and of the
+# angles summed.
+_ROUNDING = 9e-16
 
 
 def mode_count(
@@ -86,7 +87,8 @@ def all_modes(
     rows = np.repeat(np.arange(counts.size), counts)
     if most:
         out[rows, orders.astype(int)] = np.sqrt(_roots(layers.repeat(counts), orders.astype(float)))
-    return out.reshape(*shape, most)
+    # Modes of cores that hardly couple agree to rounding and may come out in either order.
+    return -np.sort(-out, axis=-1).reshape(*shape, most)
 
 
 def _normal_shape(n_normal: ArrayLike | None) -> tuple[Array, ...]:
@@ -98,7 +100,7 @@ def _count(layers: Layers) -> NDArray[np.int64]:
     counts = np.zeros(low.size, dtype=np.int64)
     can = np.flatnonzero(high > low)
     if can.size:
-        phase, _, _ = total_phase(layers.take(can), low[can])
+        phase, _, _ = total_phase(layers.take(can), low[can], at_cut_off=True)
         counts[can] = np.maximum(np.ceil(phase / np.pi - 1), 0)
     return counts
 
@@ -110,7 +112,7 @@ def _roots(layers: Layers, order: Array) -> Array:
     can = np.flatnonzero((high > low) & (order >= 0))
     if not can.size:
         return q
-    phase, _, _ = total_phase(layers.take(can), low[can])
+    phase, _, _ = total_phase(layers.take(can), low[can], at_cut_off=True)
     held = phase / np.pi - 1 > order[can]
     act, phase = can[held], phase[held]
     lo, hi, target = low[act], high[act], (order[act] + 1) * np.pi
@@ -122,10 +124,13 @@ def _roots(layers: Layers, order: Array) -> Array:
         phase, slope, _ = total_phase(layers.take(act), x)
         miss = phase - target
         lo, hi = np.where(miss >= 0, x, lo), np.where(miss <= 0, x, hi)
-        new = x - miss / slope
-        new = np.where((new > lo) & (new < hi), new, (lo + hi) / 2)
-        done = (np.abs(new - x) <= _Q_TOLERANCE * x) | (hi - lo <= _Q_TOLERANCE * x) | (miss == 0)
-        q[act[done]] = np.where(miss == 0, x, new)[done]
+        step = miss / slope
+        met = (np.abs(miss) <= _ROUNDING * target) | (np.abs(step) <= _ROUNDING * x)
+        # x is an end of its bracket. Steps beyond the middle could swing from side to side for ever.
+        free = (x - step >= lo) & (x - step <= hi) & (np.abs(step) <= (hi - lo) / 2)
+        new = np.where(free, x - step, (lo + hi) / 2)
+        done = met | (hi - lo <= _ROUNDING * x)
+        q[act[done]] = np.where(met, np.clip(x - step, lo, hi), new)[done]
         keep = ~done
         act, x, lo, hi, target = act[keep], new[keep], lo[keep], hi[keep], target[keep]
     raise ArithmeticError(f"mode search did not converge for {act.size} modes (first at batch index {act[0]})")
