@@ -8,7 +8,7 @@ from dataclasses import dataclass
 import numpy as np
 
 from ..flags import flag
-from ..records import FitQuality, FittedReading, Flag, IntArray, Rival, SiteResult, Status
+from ..records import Array, FitQuality, FittedReading, Flag, IntArray, Rival, SiteResult, Status
 from .assignment import Assignment
 from .descent import Prior
 from .estimates import SiteNumbers, numbers
@@ -39,11 +39,13 @@ def unanswered(problem: SiteProblem, flags: Sequence[Flag], notes: Sequence[Flag
     return SiteAnswer(result, None, False)
 
 
-def answer(problem: SiteProblem, settled: Settled, prior: Prior, shared: Shared) -> SiteAnswer:
-    """Final fit of a settled site with the rest of the table as prior."""
+def answer(
+    problem: SiteProblem, settled: Settled, prior: Prior, shared: Shared, start: Array | None = None
+) -> SiteAnswer:
+    """Final fit of a settled site with the rest of the table as prior; `start`: where the table left it."""
     if settled.orders is None or settled.theta is None:
         return unanswered(problem, settled.flags, settled.notes)
-    fit = fit_site(problem, settled.orders, settled.theta, prior)
+    fit = fit_site(problem, settled.orders, settled.theta if start is None else start, prior)
     flags, notes = list(settled.flags), list(settled.notes)
     rank = examine(problem.layout, fit.jacobian, Prior.of(problem.layout))
     withheld = rank.touched.copy()
@@ -131,7 +133,7 @@ def _rival(problem: SiteProblem, rival: Assignment, settled: Settled, shared: Sh
     rank = examine(problem.layout, fit.jacobian, Prior.of(problem.layout))
     which = np.flatnonzero(problem.layout.fitted & ~rank.touched)
     spans = intervals(problem, rival.orders, fit, which)
-    alone = Shared(shared.parameters, shared.best, np.diag(1 / shared.prior_u**2), shared.prior_u, {}, {})
+    alone = Shared(shared.parameters, shared.best, np.diag(1 / shared.prior_u**2), shared.prior_u, {}, {}, {})
     found = numbers(problem, fit, alone, spans, rank.touched, 1.0)
     words = ", ".join(
         f"{r.pol}{o}" if o >= 0 else f"{r.pol} {r.value:g} stray"

@@ -24,7 +24,7 @@ _STEPS = 8
 @dataclass(frozen=True)
 class Shared:
     """Joint best (Q) and information (Q, Q) of the shared unknowns; each site's part of the information, its
-    gradient, and its local unknowns at the joint best."""
+    gradient, and its unknowns at the joint best."""
 
     parameters: tuple[Parameter, ...]
     best: Array
@@ -32,6 +32,7 @@ class Shared:
     prior_u: Array
     site_information: dict[int, Array]
     site_gradient: dict[int, Array]
+    site_theta: dict[int, Array]
 
     @property
     def covariance(self) -> Array:
@@ -91,9 +92,11 @@ def solve_shared(
         best = best + step
         if float(step @ gradient) < 1e-8 * max(1, len(good)):
             break
-    return Shared(
-        parameters, best, information, prior_u, {i: p[0] for i, p in parts.items()}, {i: p[1] for i, p in parts.items()}
-    )
+    for i, theta_i in local.items():
+        mine, where = columns(problems[i].layout, parameters)
+        theta_i[mine] = best[where]
+    by_site = {i: p[0] for i, p in parts.items()}, {i: p[1] for i, p in parts.items()}
+    return Shared(parameters, best, information, prior_u, *by_site, local)
 
 
 Batch = tuple[FilmReadings, IntArray]

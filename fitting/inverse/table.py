@@ -19,9 +19,10 @@ from typing import TypeVar
 import numpy as np
 
 from ..flags import flag
-from ..records import Estimate, FitResult, Flag, Reading
+from ..records import Array, Estimate, FitResult, Flag, Reading
 from ..stack import Stack, conventions
 from .answer import SiteAnswer, answer, unanswered
+from .descent import Prior
 from .joint import Shared, site_prior, solve_shared
 from .means import group_means
 from .problem import SiteProblem, build_problems
@@ -62,7 +63,10 @@ def fit_table(
                 break
         done = problems[: len(settled)]
         shared = _joint(done, settled)
-        jobs = [(p, s, site_prior(p, shared, i)) for i, (p, s) in enumerate(zip(done, settled, strict=True))]
+        jobs = [
+            (p, s, site_prior(p, shared, i), shared.site_theta.get(i))
+            for i, (p, s) in enumerate(zip(done, settled, strict=True))
+        ]
         answers: list[SiteAnswer] = []
         for some in pool.map(partial(_answer_chunk, shared), list(_chunks(jobs))):
             answers += some
@@ -112,8 +116,11 @@ def _ignore_interrupt() -> None:
     signal.signal(signal.SIGINT, signal.SIG_IGN)
 
 
-def _answer_chunk(shared: Shared, jobs: Sequence[tuple[SiteProblem, Settled, object]]) -> list[SiteAnswer]:
-    return [answer(p, s, prior, shared) for p, s, prior in jobs]  # type: ignore[arg-type]
+Job = tuple[SiteProblem, Settled, Prior, Array | None]
+
+
+def _answer_chunk(shared: Shared, jobs: Sequence[Job]) -> list[SiteAnswer]:
+    return [answer(p, s, prior, shared, start) for p, s, prior, start in jobs]
 
 
 def _joint(problems: Sequence[SiteProblem], settled: Sequence[Settled]) -> Shared:
