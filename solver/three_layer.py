@@ -61,9 +61,9 @@ def three_layer_index(
     parts = [slice(i, i + _BLOCK) for i in range(0, order.size, _BLOCK)]
 
     def run(p: slice) -> Array:
-        normal = None if n_normal is None else n_normal[p]
-        layers = flatten(n[p], normal, t_um[p], wavelength_um[p], tm[p], order[p].shape)
-        return solve_layers(layers, order[p])
+        if n_normal is None:
+            return _isotropic(n[p], t_um[p, 0], wavelength_um[p], tm[p], order[p])
+        return solve_layers(flatten(n[p], n_normal[p], t_um[p], wavelength_um[p], tm[p], order[p].shape), order[p])
 
     if len(parts) <= 1:
         return run(slice(None))
@@ -74,35 +74,48 @@ def three_layer_index(
 
 def solve_layers(layers: Layers, order: Array) -> Array:
     """Effective index of one block (B), NaN where it is not guided."""
-    N, settled = _block(layers, order)
-    if not settled.all():
-        rest = np.flatnonzero(~settled)
-        few = layers.take(rest)
-        edge = _edge(few, order[rest])
-        N[rest] = _index(few, edge.top * _bracketed(edge))
-    return N
-
-
-def _index(layers: Layers, s: Array) -> Array:
-    return np.asarray(np.sqrt((layers.a[1] - layers.w[1] * s * s) / layers.b[1]))
-
-
-def _block(layers: Layers, order: Array) -> tuple[Array, NDArray[np.bool_]]:
-    """Effective index of each mode, NaN where it is not guided, and whether it has settled."""
     with np.errstate(invalid="ignore", divide="ignore"):
-        edge = _edge(layers, order)
-        # At cut-off the limiting half-space adds nothing to the phase.
-        other = np.sqrt(np.maximum(edge.bo - edge.do * edge.top * edge.top, 0.0))
-        excess = edge.top * edge.tau - edge.mpi - np.arctan(other / edge.top)
-        guided = (excess > 0) & (order >= 0)
+        s = _wave_number(_edge(layers, order), order)
+        return np.asarray(np.sqrt((layers.a[1] - layers.w[1] * s * s) / layers.b[1]))
+
+
+def _isotropic(n: Array, t_um: Array, wavelength_um: Array, tm: Array, order: Array) -> Array:
+    """As `solve_layers` for isotropic layers, whose coefficients need no setting up; here s is sqrt(n_film^2 - N^2),
+    so that R_i^2 = r_i (n_film^2 - n_i^2 - s^2) with r_i = (n_film / n_i)^4 for TM and 1 for TE."""
+    square = np.ascontiguousarray(n.T)
+    square = square * square
+    film, high, low = square[1], np.maximum(square[0], square[2]), np.minimum(square[0], square[2])
+    with np.errstate(invalid="ignore"):
+        dl, do = (np.where(tm, (film / x) ** 2, 1.0) for x in (high, low))
+        gap = film - high
+        tau = t_um * (2 * np.pi / wavelength_um)
+        edge = _Edge(np.sqrt(gap), tau, order * np.pi, dl * gap, dl, do * (film - low), do, np.sqrt(dl))
+        s = _wave_number(edge, order)
+        return np.asarray(np.sqrt(film - s * s))
+
+
+def _wave_number(edge: _Edge, order: Array) -> Array:
+    """s of each mode, NaN where it is not guided."""
+    # At cut-off the limiting half-space adds nothing to the phase.
+    other = np.sqrt(np.maximum(edge.bo - edge.do * edge.top * edge.top, 0.0))
+    excess = edge.top * edge.tau - edge.mpi - np.arctan(other / edge.top)
+    guided = (excess > 0) & (order >= 0)
     if guided.all():
-        s, settled = _solve(edge, excess)
-        return _index(layers, s), settled
-    s, settled = np.full(order.size, np.nan), np.ones(order.size, dtype=bool)
+        return _settled(edge, excess)
+    s = np.full(order.size, np.nan)
     rows = np.flatnonzero(guided)
     if rows.size:
-        s[rows], settled[rows] = _solve(edge.take(rows), excess[rows])
-    return _index(layers, s), settled
+        s[rows] = _settled(edge.take(rows), excess[rows])
+    return s
+
+
+def _settled(edge: _Edge, excess: Array) -> Array:
+    s, settled = _solve(edge, excess)
+    if not settled.all():
+        rest = np.flatnonzero(~settled)
+        few = edge.take(rest)
+        s[rest] = few.top * _bracketed(few)
+    return s
 
 
 def _edge(layers: Layers, order: Array) -> _Edge:
@@ -111,16 +124,8 @@ def _edge(layers: Layers, order: Array) -> _Edge:
     (b0, d0), (b1, d1) = (_half_space(layers, over, i) for i in (0, 2))
     first = b0 * d1 <= b1 * d0
     bl, dl = np.where(first, b0, b1), np.where(first, d0, d1)
-    return _Edge(
-        np.sqrt(bl / dl),
-        layers.tau[0],
-        order * np.pi,
-        bl,
-        dl,
-        np.where(first, b1, b0),
-        np.where(first, d1, d0),
-        np.sqrt(dl),
-    )
+    bo, do = np.where(first, b1, b0), np.where(first, d1, d0)
+    return _Edge(np.sqrt(bl / dl), layers.tau[0], order * np.pi, bl, dl, bo, do, np.sqrt(dl))
 
 
 def _half_space(layers: Layers, over: Array, i: int) -> tuple[Array, Array]:
