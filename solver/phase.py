@@ -43,8 +43,10 @@ def _tunnel(theta: Array, s: Array, tau: Array, gamma: Array) -> tuple[Array, Ar
     sin, cos = np.sin(theta), np.cos(theta)
     grow, fall = (sin + cos) / 2, (sin - cos) / 2
     decay = np.exp(-2 * s * tau)
-    th = np.tanh(s * tau)
-    end = theta + np.arctan2((cos - sin) * (cos + sin) * th, 1 + 2 * sin * cos * th)
+    # 1 + tanh(s tau) sin 2 theta without its cancellation where the field falls almost purely: there the little that
+    # grows is all that one core knows of the other.
+    across = (sin + cos) ** 2 + decay * (cos - sin) ** 2
+    end = theta + np.arctan2((cos - sin) * (cos + sin) * (1 - decay), across)
     r2 = 2 * (grow**2 + (fall * decay) ** 2)
     integral = (grow**2 + fall**2 * decay) * (1 - decay) / (2 * s) + 2 * grow * fall * tau * decay
     return end, r2, np.maximum(integral, 0.0) / gamma**2
