@@ -118,7 +118,6 @@ def _roots(layers: Layers, order: Array) -> Array:
     lo, hi, target = low[act], high[act], (order[act] + 1) * np.pi
     fraction = (order[act] + 1) / (phase / np.pi + 1)
     x = np.clip(hi - (hi - lo) * fraction**2, lo, hi)
-    last = np.full(x.shape, np.inf)
     for _ in range(_MAX_STEPS):
         if not act.size:
             return q
@@ -126,15 +125,16 @@ def _roots(layers: Layers, order: Array) -> Array:
         miss = phase - target
         lo, hi = np.where(miss >= 0, x, lo), np.where(miss <= 0, x, hi)
         step = miss / slope
-        size = np.abs(step)
-        met = (np.abs(miss) <= _ROUNDING * target) | (size <= _ROUNDING * x)
-        # x is an end of its bracket. Newton steps beyond the middle could swing from side to side, and steps that do
-        # not shrink creep: the middle serves instead.
-        free = (x - step >= lo) & (x - step <= hi) & (size <= (hi - lo) / 2) & (size <= last / 2)
+        met = np.abs(miss) <= _ROUNDING * target
+        # Half way between nearly degenerate modes F is so steep that Newton's step vanishes far from either: a step
+        # below rounding counts only once the next point on has shown the root to lie between.
+        shortest = 2 * _ROUNDING * x
+        step = np.where(np.abs(step) < shortest, np.copysign(shortest, step), step)
+        # x is an end of its bracket. Steps beyond the middle could swing from side to side for ever.
+        free = (x - step >= lo) & (x - step <= hi) & (np.abs(step) <= (hi - lo) / 2)
         new = np.where(free, x - step, (lo + hi) / 2)
-        done = met | (hi - lo <= _ROUNDING * x)
-        q[act[done]] = np.where(met, np.clip(x - step, lo, hi), new)[done]
+        done = met | (hi - lo <= 2 * shortest)
+        q[act[done]] = np.where(met, x, (lo + hi) / 2)[done]
         keep = ~done
-        last = np.where(free, size, np.inf)[keep]
         act, x, lo, hi, target = act[keep], new[keep], lo[keep], hi[keep], target[keep]
     raise ArithmeticError(f"mode search did not converge for {act.size} modes (first at batch index {act[0]})")
