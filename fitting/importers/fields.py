@@ -8,7 +8,7 @@ from collections.abc import Callable
 
 from .figures import Unreadable, angle_deg, clean, number, split_unit
 from .grid import Cell
-from .headings import TO_UM
+from .headings import PER_UM, to_um
 from .plan import NM_RANGE, TO_MM
 from .titles import plain_text
 from .vocabulary import NO_READING, UNITS
@@ -39,21 +39,21 @@ def no_reading(value: Cell) -> bool:
 
 def wavelength_um(value: Cell, style: str | None, unit: str, heading_has_unit: bool) -> float:
     """A wavelength in µm as typed; the cell may carry its own unit if that agrees with the heading."""
-    low, high = (limit * 1e-3 / TO_UM[unit] for limit in NM_RANGE)
+    low, high = (limit * 1e-3 * PER_UM[unit] for limit in NM_RANGE)
     if isinstance(value, str):
         value, typed = split_unit(clean(value))
         own = UNITS.get((typed or "").casefold().replace("µ", "μ"))
-        if own in TO_UM and own != unit:
+        if own in PER_UM and own != unit:
             if heading_has_unit:
                 raise Unreadable(f"'{value} {typed}' under a heading in {_shown(unit)}", "use one unit in the column")
             unit = str(own)
-            low, high = (limit * 1e-3 / TO_UM[unit] for limit in NM_RANGE)
-        elif typed is not None and own not in TO_UM:
+            low, high = (limit * 1e-3 * PER_UM[unit] for limit in NM_RANGE)
+        elif typed is not None and own not in PER_UM:
             raise Unreadable(f"'{value} {typed}' is no wavelength", "give the wavelength in nm")
     found = number(value, style, low, high)
     if low <= found <= high:
-        return found * TO_UM[unit]
-    fits = [other for other in TO_UM if 0.2 <= found * TO_UM[other] <= 3.0 and other != unit]
+        return to_um(found, unit)
+    fits = [other for other in PER_UM if 0.2 <= found / PER_UM[other] <= 3.0 and other != unit]
     hint = f"it may be in {' or '.join(_shown(other) for other in fits)}: " if fits else ""
     raise Unreadable(
         f"{found:g} {_shown(unit)} is no possible wavelength", f"{hint}correct the number or the unit in the heading"

@@ -37,7 +37,14 @@ class Heading:
         return self.meaning is not None or self.says_mode
 
 
-TO_UM = {"nm": 1e-3, "um": 1.0, "angstrom": 1e-4}
+PER_UM = {"nm": 1000.0, "um": 1.0, "angstrom": 10_000.0}
+
+
+def to_um(value: float, unit: str) -> float:
+    """A length in µm, rounded to a femtometre so that 632.8 nm and 0.6328 µm are the same number."""
+    return round(value / PER_UM[unit], 9)
+
+
 _WAVELENGTH = re.compile(
     r"(?:@|\bat\b|\bbei\b|\bà\b)?\s*(?:λ|lambda|wavelength|wl)?\s*=?\s*(\d+(?:[.,]\d+)?)\s*(nm|μm|um|å)(?![a-zμ])", re.I
 )
@@ -106,7 +113,7 @@ def _take_wavelength(text: str) -> tuple[str, float | None]:
     if match is None:
         return text, None
     unit = UNITS[match.group(2).casefold()]
-    value = float(match.group(1).replace(",", ".")) * TO_UM[unit]
+    value = to_um(float(match.group(1).replace(",", ".")), unit)
     rest = (text[: match.start()] + " " + text[match.end() :]).strip()
     return re.sub(r"[(\[]\s*[)\]]", "", rest).strip(), value
 
@@ -148,10 +155,20 @@ def _without(text: str, match: re.Match[str]) -> str:
     return re.sub(r"[(\[]\s*[)\]]", "", rest).strip()
 
 
+def unit_of(value: object) -> str | None:
+    """The unit that a cell holds and nothing else, with or without brackets."""
+    if not isinstance(value, str):
+        return None
+    return UNITS.get(neat(value).strip("[]()").strip().casefold())
+
+
 def combine(parts: list[Heading]) -> Heading:
     """One heading from the cells stacked above a column, uppermost first; the lowest that names a meaning wins."""
     if len(parts) == 1:
         return parts[0]
+    lowest = parts[-1].meaning
+    if lowest is not None and lowest not in READINGS and lowest != "later":
+        return parts[-1]  # a title over a column of names says nothing about it
     joined = parse_heading(" ".join(part.text for part in parts))
     if joined.meaning not in (None, "reading") and not any(part.says_mode for part in parts):
         return joined
@@ -173,6 +190,6 @@ def combine(parts: list[Heading]) -> Heading:
         meaning = "reading"
     else:
         meaning = meanings[-1] if meanings else None
-    if meaning in READINGS and merged.unit in TO_UM:
+    if meaning in READINGS and merged.unit in PER_UM:
         merged = replace(merged, unit=None)  # the unit belonged to the wavelength over the column
     return replace(merged, meaning=meaning)

@@ -12,7 +12,7 @@ from itertools import pairwise
 
 from .figures import looks_numeric
 from .grid import Cell, Grid, is_blank
-from .headings import READINGS, TO_UM, Heading, combine, neat, parse_heading
+from .headings import PER_UM, READINGS, Heading, combine, neat, parse_heading, to_um, unit_of
 from .titles import Context, from_rows
 
 MAX_HEADING_ROWS = 3
@@ -51,7 +51,7 @@ def find_tables(grid: Grid) -> list[Table]:
     row = 0
     while row < len(grid.rows):
         band = _band(grid, row)
-        if band is None or (bands and _repeats(grid, bands[-1][1], band, row)):
+        if band is None or _says_more_without(grid, row, band) or (bands and _repeats(grid, bands[-1][1], band, row)):
             row += 1
             continue
         bands.append((row, band))
@@ -64,6 +64,12 @@ def find_tables(grid: Grid) -> list[Table]:
         tables += _segments(grid, top, header, stop, columns, tuple(range(first_title, top)))
         first_title = stop
     return tables
+
+
+def _says_more_without(grid: Grid, top: int, band: Band) -> bool:
+    """Whether the first row adds nothing to the heading: then it is a title above it."""
+    lower = _band(grid, top + 1) if band[0] > top else None
+    return lower is not None and _score(lower[1]) >= _score(band[1])
 
 
 def _repeats(grid: Grid, earlier: Band, band: Band, row: int) -> bool:
@@ -100,31 +106,52 @@ def _may_head(cells: tuple[Cell, ...]) -> bool:
     return filled > 0
 
 
+GROUPS = ("wavelength", "mode", "pol")  # headings that may stand over several columns of readings
+
+
 def _may_continue(grid: Grid, top: int, row: int) -> bool:
     """Whether a row can be the next heading row: words, or numbers under words that call for them."""
-    filled = 0
-    for column, value in enumerate(grid.rows[row]):
-        if is_blank(value):
-            continue
-        filled += 1
-        if looks_numeric(value) and not (isinstance(value, str) and parse_heading(value).says_mode):
-            over = [parse_heading(text) for text in _stack(grid, top, row - 1, column)]
-            if not any(part.meaning in ("wavelength", "mode", "pol") or part.pol for part in over):
-                return False
-            if not grid.merged and not is_blank(grid.cell(row, 0)) and looks_numeric(grid.cell(row, 0)):
-                return False
-        elif not isinstance(value, str):
-            return False
-    return filled > 0
+    filled = [(column, value) for column, value in enumerate(grid.rows[row]) if not is_blank(value)]
+    if not filled or all(unit_of(value) is not None for _, value in filled):
+        return False
+    return all(_continues(grid, top, row, column, value) for column, value in filled)
 
 
-def _stack(grid: Grid, top: int, bottom: int, column: int) -> list[str]:
-    """The texts over a column, uppermost first; a group heading holds for the blanks to its right."""
+def _continues(grid: Grid, top: int, row: int, column: int, value: Cell) -> bool:
+    over = [parse_heading(text) for text in _stack(grid, top, row - 1, column, row)]
+    if looks_numeric(value) and not (isinstance(value, str) and parse_heading(value).says_mode):
+        figure = _figure(value)
+        if any(part.meaning == "wavelength" for part in over):
+            return figure is not None and figure > 0.1
+        first = is_blank(grid.cell(row - 1, column)) or figure in (0.0, 1.0)  # TE over 0, 1, 2 or 1, 2, 3
+        calls = any(part.pol is not None or part.meaning == "mode" for part in over)
+        return calls and first and figure is not None and figure.is_integer() and 0 <= figure < 100
+    if not isinstance(value, str):
+        return False
+    named = [part for part in over if part.meaning is not None and part.meaning not in GROUPS and not part.says_mode]
+    if not named or parse_heading(value).known:
+        return True
+    return parse_heading(" ".join([part.text for part in over] + [value])).known
+
+
+def _figure(value: Cell) -> float | None:
+    try:
+        return float(str(value).replace(",", "."))
+    except ValueError:
+        return None
+
+
+def _stack(grid: Grid, top: int, bottom: int, column: int, lowest: int | None = None) -> list[str]:
+    """The texts over a column from row `top` to `bottom`; a group heading holds for the blanks to its right.
+
+    lowest: the last row of the heading, if that is below `bottom`.
+    """
+    lowest = bottom if lowest is None else lowest
     texts: list[str] = []
     for row in range(top, bottom + 1):
         value = grid.merged_over(row, column)
-        if is_blank(value) and row < bottom:
-            value = _group_to_the_left(grid, row, bottom, column)
+        if is_blank(value) and row < lowest:
+            value = _group_to_the_left(grid, row, lowest, column)
         if not is_blank(value):
             text = neat(str(value))
             if not texts or texts[-1] != text:
@@ -132,18 +159,17 @@ def _stack(grid: Grid, top: int, bottom: int, column: int) -> list[str]:
     return texts
 
 
-def _group_to_the_left(grid: Grid, row: int, bottom: int, column: int) -> Cell:
-    if is_blank(grid.merged_over(bottom, column)):
-        return None
-    for left in range(column - 1, -1, -1):
+def _group_to_the_left(grid: Grid, row: int, lowest: int, column: int) -> Cell:
+    """The group heading that a blank belongs to: the next filled cell to the left, if that heads readings too."""
+    for left in range(column, -1, -1):
+        under = grid.merged_over(lowest, left)
+        heads = looks_numeric(under) or (isinstance(under, str) and parse_heading(under).meaning in READINGS)
+        if not heads:
+            return None
         value = grid.cell(row, left)
         if not is_blank(value):
             part = parse_heading(str(value))
-            return (
-                value if part.says_mode or part.meaning in READINGS or part.meaning in ("wavelength", "mode") else None
-            )
-        if is_blank(grid.merged_over(bottom, left)):
-            return None
+            return value if part.says_mode or part.meaning in READINGS or part.meaning in GROUPS else None
     return None
 
 
@@ -169,11 +195,13 @@ def _stacked_heading(texts: list[str]) -> Heading:
 
 def _numeric_part(text: str, over: list[Heading]) -> Heading:
     """A bare number below a group heading: a wavelength below `Wavelength (nm)`, a mode number below TE or `Mode`."""
-    value = float(text.replace(",", ".")) if text.replace(",", ".").replace(".", "", 1).isdigit() else -1.0
+    value = _figure(text)
     above = over[-1]
+    if value is None:
+        return Heading(text)
     if above.meaning == "wavelength" and value > 0.0:
         unit = above.unit or ("nm" if value > 100.0 else "um")
-        return Heading(text, "reading", None, None, None, value * TO_UM.get(unit, 1e-3))
+        return Heading(text, "reading", None, None, None, to_um(value, unit if unit in PER_UM else "nm"))
     if value >= 0.0 and value.is_integer() and value < 100:
         return Heading(text, "reading", None, None, int(value))
     return Heading(text)

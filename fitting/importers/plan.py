@@ -15,7 +15,7 @@ from dataclasses import dataclass, replace
 
 from .figures import Unreadable, angle_deg, decimal_style, looks_numeric, number
 from .grid import Findings, Grid, is_blank
-from .headings import READINGS
+from .headings import READINGS, unit_of
 from .layout import Column, Table, repeated
 from .titles import Context
 from .vocabulary import AMBIGUOUS, UNIT_WORDS, UNITS_OF, WORDS, normal
@@ -93,6 +93,15 @@ def _right_kind(table: Table, findings: Findings) -> bool:
             f"a table of ring, fringe or spectrum data ({names})",
             "this version reads prism-coupler tables only",
             "keep it for a later version and give the table of angles or effective indices",
+        )
+        return False
+    if table.having("air_wavelength"):
+        column = table.having("air_wavelength")[0]
+        findings.fault(
+            table.grid.place(table.header, column.index, column.heading.text),
+            "wavelengths in air",
+            "which medium wavelengths are in is said in one place only, the stack file (vacuum unless it says air)",
+            'put wavelength_reference = "air" into the stack file and call the column wavelength, or give vacuum ones',
         )
         return False
     if not table.having(*READINGS):
@@ -214,8 +223,6 @@ def _assumed_degrees(plan: Plan, column: Column, findings: Findings) -> str:
 
 def _unit_row(table: Table) -> dict[int, str]:
     """Units in the first row under the headings, where that row holds nothing but units."""
-    from .vocabulary import UNITS
-
     row = table.start
     while row < table.stop and all(is_blank(value) for value in table.grid.rows[row]):
         row += 1
@@ -225,11 +232,11 @@ def _unit_row(table: Table) -> dict[int, str]:
     for index, value in enumerate(table.grid.rows[row]):
         if is_blank(value):
             continue
-        text = value.strip().strip("[]()").strip().casefold().replace("µ", "μ") if isinstance(value, str) else ""
-        if text not in UNITS:
+        unit = unit_of(value)
+        if unit is None:
             return {}
-        if text != "-":
-            units[index] = UNITS[text]
+        if value.strip() != "-":
+            units[index] = unit
     return units
 
 

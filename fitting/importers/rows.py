@@ -343,7 +343,7 @@ class RowReader:
         wavelength = self._wavelength(row, column, facts)
         pol = self._agreed(row, column, "polarisation", column.pol, facts.pol) or self.context.pol
         order = self._agreed(row, column, "mode", column.order, facts.order)
-        if pol is None:
+        if pol is None and self._cell(row, "pol") in (None, ""):  # an unreadable one has had its fault
             self._refuse(row, "pol", self.plan.index("pol"), None, Unreadable("no polarisation", "fill in TE or TM"))
         if pol is None or wavelength is None:
             return None

@@ -9,6 +9,7 @@ from __future__ import annotations
 import codecs
 import csv
 import io
+import math
 import re
 
 from ..records import Place
@@ -81,17 +82,18 @@ def _decode(name: str, data: bytes, findings: Findings) -> tuple[str, str] | Non
 
 def _separator(lines: list[str]) -> str:
     """The separator that makes most headings readable; ties go to the one standing first in SEPARATORS."""
-    best, best_score = ",", 0
+    best, best_score = "", -math.inf
     for separator in SEPARATORS:
-        score = 0
+        score = -math.inf
         for line in lines:
             cells = _fields(line, separator)
             known = sum(parse_heading(cell).known for cell in cells if cell)
             filled = sum(1 for cell in cells if cell)
-            score = max(score, known * 100 - (filled - known)) if known >= 2 else score
+            if known >= 2:
+                score = max(score, known - 0.5 * (filled - known))
         if score > best_score:
             best, best_score = separator, score
-    if best_score == 0:
+    if not best:
         counts = {mark: sum(mark in line for line in lines) for mark in "\t;|,"}
         best = max(counts, key=lambda mark: counts[mark])
     return best
@@ -106,7 +108,7 @@ def _fields(line: str, separator: str) -> list[str]:
 
 def _split(name: str, text: str, lines: list[str], separator: str, findings: Findings) -> list[tuple[Cell, ...]] | None:
     if separator in ("  ", " "):
-        return [tuple(_fields(line, separator)) if line.strip() else () for line in lines]
+        return _split_at_blanks(lines, separator)
     rows: list[tuple[Cell, ...]] = []
     reader = csv.reader(io.StringIO(text, newline=""), delimiter=separator, skipinitialspace=True)
     try:
@@ -122,4 +124,21 @@ def _split(name: str, text: str, lines: list[str], separator: str, findings: Fin
             "look for a quotation mark that is opened and not closed",
         )
         return None
+    return rows
+
+
+def _split_at_blanks(lines: list[str], separator: str) -> list[tuple[Cell, ...]]:
+    """Lines cut at blanks; titles above the heading, remarks behind a # and lines without a figure stay whole."""
+    scores = [sum(parse_heading(cell).known for cell in _fields(line, separator)) for line in lines[:HEADING_ROWS]]
+    heading = scores.index(max(scores))
+    rows: list[tuple[Cell, ...]] = []
+    for number, line in enumerate(lines):
+        remark = number != heading and line.lstrip()[:1] in ("#", "%")
+        words = number > heading and scores[heading] > 1 and not any(mark.isdigit() for mark in line)
+        if not line.strip():
+            rows.append(())
+        elif number < heading or remark or words:
+            rows.append((line.strip().lstrip("#% "),))
+        else:
+            rows.append(tuple(_fields(line, separator)))
     return rows

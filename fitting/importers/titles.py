@@ -12,7 +12,7 @@ from dataclasses import dataclass, field, replace
 
 from .figures import Unreadable, clean, number
 from .grid import Cell, Grid, is_blank
-from .headings import TO_UM, neat, parse_heading
+from .headings import PER_UM, neat, parse_heading, to_um
 from .modes import POLARISATIONS
 
 _UM = r"(\d+(?:[.,]\d+)?)\s*(nm|μm|um|å)(?![a-zμ])"
@@ -155,14 +155,12 @@ def _wavelength_pair(unit: str | None, beside: Cell) -> Context:
     except Unreadable:
         return Context()
     guessed = unit or ("nm" if value > 100.0 else "um")
-    return Context((value * TO_UM.get(guessed, 1e-3),))
+    return Context((to_um(value, guessed if guessed in PER_UM else "nm"),))
 
 
 def _um(value: str, unit: str, *_: str) -> float:
-    return (
-        float(value.replace(",", "."))
-        * TO_UM["angstrom" if unit.casefold() == "å" else unit.casefold().replace("μ", "u")]
-    )
+    name = "angstrom" if unit.casefold() == "å" else unit.casefold().replace("μ", "u")
+    return to_um(float(value.replace(",", ".")), name)
 
 
 def plain_text(value: Cell) -> str:

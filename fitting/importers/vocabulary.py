@@ -15,8 +15,8 @@ MEANINGS: dict[str, str] = {
     "site": "site|point|pt|meas point|meas pt|measurement point|measurement site|location|loc|spot|position"
     "|pos|die|siteid|messpunkt|punkt|messstelle|stelle|messort|sitio|punto|sito|posizione|posicion"
     "|emplacement|point de mesure|plek|サイト|測定点|位置|测点|测量点",
-    "x_mm": "x|x pos|x position|x coordinate|x coord|xpos|wafer x|die x|x koordinate",
-    "y_mm": "y|y pos|y position|y coordinate|y coord|ypos|wafer y|die y|y koordinate",
+    "x_mm": "x|x pos|position x|pos x|x position|x coordinate|x coord|xpos|wafer x|die x|x koordinate",
+    "y_mm": "y|y pos|position y|pos y|y position|y coordinate|y coord|ypos|wafer y|die y|y koordinate",
     "measured_at": "measured at|measured on|date|datetime|timestamp|date time|measurement date|measurement time"
     "|datum|zeitpunkt|messdatum|messzeit|fecha|date de mesure|data misura|日付|日期|測定日|测量日期",
     "clock": "time|uhrzeit|heure|hora|zeit|時刻|时间",
@@ -32,7 +32,7 @@ MEANINGS: dict[str, str] = {
     "mode": "mode|modes|m|order|mode order|mode number|mode label|modus|modenummer|mode nummer|ordnung"
     "|modenordnung|moden|ordre|ordre du mode|modo|orden|ordine|ordem|numero de mode|モード|モード次数"
     "|模式|次数|模",
-    "angle": "angle|theta|θ|coupling angle|synchronous angle|external angle|angle external|incidence angle"
+    "angle": "angle|theta|θ|θm|ext angle|coupling angle|synchronous angle|external angle|angle external|incidence angle"
     "|incident angle|angle of incidence|measured angle|dip angle|mode angle|table angle"
     "|rotation angle|theta ext|θ ext|theta m|θ m|angle θ|angle theta|coupling angle θ|winkel|winkel θ"
     "|einkoppelwinkel|koppelwinkel|kopplungswinkel|einfallswinkel|messwinkel|angle de couplage"
@@ -43,7 +43,7 @@ MEANINGS: dict[str, str] = {
     "|indice effectif|indice efectivo|indice efficace|indice effettivo|effectieve index|実効屈折率"
     "|等価屈折率|有效折射率",
     "u": "u|uncertainty|standard uncertainty|std uncertainty|u angle|u theta|u θ|u n|u neff|u n eff"
-    "|angle u|uncertainty of angle|σ θ|sigma theta|sigma|σ|std|sd|stdev|standard deviation"
+    "|angle u|uncertainty of angle|σ θ|σθ|sigma theta|sigma|σ|std|sd|stdev|standard deviation"
     "|unsicherheit|standardunsicherheit|messunsicherheit|incertitude|incertidumbre|incertezza"
     "|onzekerheid|不確かさ|不确定度",
     "inner_angle": "internal angle|angle internal|angle in prism|angle in the prism|base angle|angle at base"
@@ -215,7 +215,7 @@ def meaning_of(name: str) -> str | None:
     words = text.split()
     if len(words) > 1 and words[-1] in _TRAILING:
         return _SPELLINGS.get(" ".join(words[:-1]))
-    return None
+    return _SPELLINGS.get(text[:-1]) if len(text) > 4 and text.endswith("s") else None
 
 
 def is_summary(text: str) -> bool:
