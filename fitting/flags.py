@@ -18,7 +18,8 @@ FLAGS: dict[str, str] = {
     "label_doubtful": "The mode numbers as typed do not fit, others do. Check the labels.",
     "polarisation_doubtful": "All readings fit if TE and TM are exchanged. Check the polarisation column.",
     "poor_fit": "The readings scatter more than their stated uncertainty allows; uncertainties have been enlarged.",
-    "many_rejected": "So many readings fit no mode that the rest cannot be checked. Check the sheet and the stack file.",
+    "many_rejected": "So many readings fit no mode that the rest cannot be checked. Check the sheet and the "
+    "stack file.",
     "at_window_edge": "The answer lies at the edge of its fit window. Widen the window in the stack file.",
     "not_converged": "The fit did not settle. Check the readings, or narrow the fit windows.",
     "shared_out_of_prior": "A shared quantity came out far from its stated value. Check the prism constants.",

@@ -8,7 +8,7 @@ from __future__ import annotations
 
 from collections.abc import Sequence
 from dataclasses import dataclass, field
-from enum import Enum
+from enum import StrEnum
 
 import numpy as np
 from numpy.typing import NDArray
@@ -51,7 +51,7 @@ class Fault:
         return f"{self.place}: {self.was}, {self.required}, {self.remedy}"
 
 
-class InputRefused(Exception):
+class InputRefused(Exception):  # noqa: N818 (the plain words that the docs use)
     """The input cannot be used; carries every fault found, not just the first."""
 
     def __init__(self, faults: Sequence[Fault]) -> None:
@@ -59,7 +59,7 @@ class InputRefused(Exception):
         super().__init__("\n".join(str(fault) for fault in self.faults))
 
 
-class Quantity(str, Enum):
+class Quantity(StrEnum):
     """What a prism-coupler reading states."""
 
     ANGLE = "angle_deg"
@@ -104,7 +104,7 @@ class InputFile:
     sha256: str
 
 
-class Status(str, Enum):
+class Status(StrEnum):
     OK = "ok"
     FLAGGED = "flagged"
     FAILED = "failed"

@@ -1,4 +1,4 @@
-"""Makes templates/prism.xlsx, the blank workbook for coupling angles: `python tests/reference/make_prism_template.py`."""
+"""Makes templates/prism.xlsx, the blank workbook: `python tests/reference/make_prism_template.py`."""
 
 from __future__ import annotations
 
@@ -26,7 +26,7 @@ COLUMNS = [
     (
         "u",
         8,
-        "Standard uncertainty (k = 1) of this angle in degrees, where it differs from the stack file's angle_u_deg.",
+        "Standard uncertainty (k = 1) of this angle in degrees, if it is not the stack file's angle_u_deg.",
     ),
     ("temperature_C", 15, "Temperature of the wafer. May stay blank."),
     ("measured_at", 18, "When it was read, e.g. 2026-03-05 14:10. May stay blank."),
@@ -35,13 +35,13 @@ COLUMNS = [
 GUIDE = [
     "How to fill in the sheet 'readings'",
     "",
-    "One row a reading: one mode at one wavelength and polarisation of one site. Rows in any order; columns may be moved,",
-    "left out or renamed in plain words; title rows may be added above. Units belong into the headings.",
+    "One row a reading: one mode at one wavelength and polarisation of one site. Rows in any order; columns may be",
+    "moved, left out or renamed in plain words; title rows may be added above. Units belong into the headings.",
     "",
     "Each column's note (the red corner of its heading) says what it takes.",
     "",
-    "An invented example, in words: wafer W01, site 1, 632.8 nm, TE, mode 0, read at 3.94 degrees; the next mode of the same",
-    "site, its number not known, read at -16.85 degrees: the same entries with mode left blank.",
+    "An invented example, in words: wafer W01, site 1, 632.8 nm, TE, mode 0, read at 3.94 degrees; the next mode of",
+    "the same site, its number not known, read at -16.85 degrees: the same entries with mode left blank.",
     "",
     "A film with unknown index and thickness needs two modes at least; three or more let the fit check itself.",
     "Readings that were tried and not seen: leave the angle blank or write n/a. They are listed, not counted.",
@@ -50,7 +50,7 @@ GUIDE = [
     "",
     "Then:  layerlot inspect FILE  shows what was understood;  layerlot fit STACK FILE --out FOLDER  fits it.",
     "",
-    "Laser light at the prism, and pressure on glass: follow your laboratory's laser-safety rules and licensed practice.",
+    "Laser light at the prism, and pressure on glass: follow local laser-safety rules and licensed practice.",
 ]
 
 
