@@ -24,6 +24,9 @@ from .three_layer import three_layer_derivatives
 
 Flags = NDArray[np.bool_]
 
+# Decay lengths from which a layer counts as thick: its field is then written by its values at both edges.
+_THICK = 1.0
+
 
 @dataclass(frozen=True, slots=True)
 class SlabDerivatives:
@@ -97,7 +100,9 @@ def _stack_derivatives(layers: Layers, N: Array, wavelength_um: Array) -> tuple[
     tm = (a == 1).all(axis=0)
     along = np.where(tm, 2 * np.sqrt(w) * profile.wpsi1, 2 * np.sqrt(a) * profile.psi2) / total
     normal = np.where(tm, 2 * q * b * np.sqrt(b) * profile.psi2, 0.0) / total
-    psi, v = profile.psi_low, profile.v_low
+    # h at the edge with the smaller field, where less cancels
+    low = np.abs(profile.psi_low) <= np.abs(profile.psi_high)
+    psi, v = np.where(low, profile.psi_low, profile.psi_high), np.where(low, profile.v_low, profile.v_high)
     h = v**2 / w[1:-1] + (a[1:-1] - q * b[1:-1]) * psi**2
     dt = h / total * (2 * np.pi / wavelength_um)
     dl = -2 * profile.wpsi1.sum(axis=0) / (total * wavelength_um)
@@ -114,7 +119,6 @@ def _profile(layers: Layers, N: Array) -> _Profile:
     slope = gamma * (up_wron + down_wron) + layers.tau * layers.b[1:-1] / (2 * layers.w[1:-1] * s[1:-1])
     m = np.where(osc[1:-1], slope, np.inf).argmin(axis=0)
     pick = (m, np.arange(q.size))
-    below = np.arange(layers.tau.shape[0])[:, None] <= m
     up_scale = np.exp((up_log - up_log[pick]) / 2)
     down_scale = np.exp((down_log - down_log[pick]) / 2)
     # The field is continuous, not only its size: the sweep from the cover may come in with the other sign.
@@ -124,13 +128,15 @@ def _profile(layers: Layers, N: Array) -> _Profile:
     v_low = np.cos(up) * up_scale
     psi_high = np.sin(down) * down_scale / gamma * sign
     v_high = -np.cos(down) * down_scale * sign
-    psi2, wpsi1 = _integrals_from(layers, s, osc, psi_low, v_low)
-    psi2_d, wpsi1_d = _integrals_from(layers, s, osc, psi_high, -v_high)
-    far_psi, far_v = _cross(layers, s, osc, psi_low, v_low)
-    near_psi, near_v = _cross(layers, s, osc, psi_high, -v_high)
-    psi2, wpsi1 = np.where(below, psi2, psi2_d), np.where(below, wpsi1, wpsi1_d)
-    psi_l, v_l = np.where(below, psi_low, near_psi), np.where(below, v_low, -near_v)
-    psi_h, v_h = np.where(below, far_psi, psi_high), np.where(below, far_v, v_high)
+    # Below the joining layer the sweep from below holds both edges of every layer, above it the other one; only the
+    # joining layer, which oscillates, is crossed. No step runs along a falling field.
+    rows = np.arange(layers.tau.shape[0])[:, None]
+    far_psi, far_v = _cross(layers, s, psi_low, v_low)
+    psi_l = np.where(rows <= m, psi_low, np.roll(psi_high, 1, axis=0))
+    v_l = np.where(rows <= m, v_low, np.roll(v_high, 1, axis=0))
+    psi_h = np.where(rows < m, np.roll(psi_low, -1, axis=0), np.where(rows == m, far_psi, psi_high))
+    v_h = np.where(rows < m, np.roll(v_low, -1, axis=0), np.where(rows == m, far_v, v_high))
+    psi2, wpsi1 = _integrals(layers, s, osc, psi_l, v_l, psi_h)
     ends = []
     for psi, k in ((psi_l[0], 0), (psi_h[-1], -1)):
         ends.append((psi**2 / (2 * s[k]), layers.w[k] * s[k] * psi**2 / 2))
@@ -143,7 +149,7 @@ def _waves(layers: Layers, s: Array, osc: Flags) -> tuple[Array, Array]:
     """sin(x)/x and (1 - sinc 2x) / (2 x^2) of every interior layer, entire in g tau^2 = x^2."""
     x = s[1:-1] * layers.tau
     inside = osc[1:-1]
-    flat = np.minimum(x, 30.0)  # beyond, `_integrals_from` takes the exponential form
+    flat = np.minimum(x, 2 * _THICK)  # beyond, `_integrals` takes the exponential form
     x_safe = np.where(x < 1e-150, 1e-150, x)
     f_safe = np.maximum(flat, 1e-150)
     sigma = np.where(inside, np.sin(x_safe) / x_safe, np.sinh(f_safe) / f_safe)
@@ -155,9 +161,11 @@ def _waves(layers: Layers, s: Array, osc: Flags) -> tuple[Array, Array]:
     return sigma, rest
 
 
-def _integrals_from(layers: Layers, s: Array, osc: Flags, psi: Array, v: Array) -> tuple[Array, Array]:
-    """Integrals of psi^2 and w psi'^2 over each interior layer from its entry values, (L - 2, B)."""
+def _integrals(layers: Layers, s: Array, osc: Flags, psi: Array, v: Array, far_psi: Array) -> tuple[Array, Array]:
+    """Integrals of psi^2 and w psi'^2 over each interior layer, (L - 2, B), from psi and v at its lower edge and, in
+    thick evanescent layers, from psi at both edges."""
     w, tau, si = layers.w[1:-1], layers.tau, s[1:-1]
+    thick = ~osc[1:-1] & (si * tau > _THICK)
     g = np.where(osc[1:-1], si**2, -(si**2))
     sigma, rest = _waves(layers, s, osc)
     cc = tau * (1 - g * tau**2 * rest)
@@ -166,28 +174,23 @@ def _integrals_from(layers: Layers, s: Array, osc: Flags, psi: Array, v: Array) 
     slope = v / w
     psi2 = psi**2 * cc + 2 * psi * slope * cs + slope**2 * ss
     wpsi1 = w * (slope**2 * cc - 2 * g * psi * slope * cs + (g * psi) ** 2 * ss)
-    thick = ~osc[1:-1] & (si * tau > 1.0)
     if thick.any():
-        grow, fall = (psi + slope / si) / 2, (psi - slope / si) / 2
-        e = np.exp(np.minimum(2 * si * tau, 700.0))
-        square = (grow**2 * (e - 1) + fall**2 * (1 - 1 / e)) / (2 * si)
-        cross = 2 * grow * fall * tau
+        # psi = grow exp(-s (t - x)) + fall exp(-s x): nothing here can overflow
+        e = np.exp(-si * tau)
+        share = np.where(thick, 1 - e * e, 1.0)
+        grow, fall = (far_psi - psi * e) / share, (psi - far_psi * e) / share
+        square = (grow**2 + fall**2) * share / (2 * si)
+        cross = 2 * grow * fall * tau * e
         psi2 = np.where(thick, square + cross, psi2)
         wpsi1 = np.where(thick, w * si**2 * (square - cross), wpsi1)
     return psi2, wpsi1
 
 
-def _cross(layers: Layers, s: Array, osc: Flags, psi: Array, v: Array) -> tuple[Array, Array]:
-    """psi and v at the far edge of each interior layer."""
-    w, tau, si = layers.w[1:-1], layers.tau, s[1:-1]
-    x = si * tau
-    slope = v / w / si
-    e = np.exp(np.minimum(x, 350.0))
-    grow, fall = (psi + slope) / 2 * e, (psi - slope) / 2 / e
-    inside = osc[1:-1]
-    far = np.where(inside, psi * np.cos(x) + slope * np.sin(x), grow + fall)
-    far_slope = np.where(inside, slope * np.cos(x) - psi * np.sin(x), grow - fall)
-    return far, far_slope * w * si
+def _cross(layers: Layers, s: Array, psi: Array, v: Array) -> tuple[Array, Array]:
+    """psi and v at the upper edge of each interior layer, as if it oscillated."""
+    gamma = (layers.w * s)[1:-1]
+    sin, cos = np.sin(s[1:-1] * layers.tau), np.cos(s[1:-1] * layers.tau)
+    return psi * cos + v / gamma * sin, v * cos - psi * gamma * sin
 
 
 def mode_field(

@@ -134,7 +134,7 @@ def _roots(layers: Layers, order: Array) -> Array:
         free = (x - step >= lo) & (x - step <= hi) & (np.abs(step) <= (hi - lo) / 2)
         new = np.where(free, x - step, (lo + hi) / 2)
         done = met | (hi - lo <= 2 * shortest)
-        q[act[done]] = np.where(met, x, (lo + hi) / 2)[done]
+        q[act[done]] = np.clip(x - miss / slope, lo, hi)[done]
         keep = ~done
         act, x, lo, hi, target = act[keep], new[keep], lo[keep], hi[keep], target[keep]
     raise ArithmeticError(f"mode search did not converge for {act.size} modes (first at batch index {act[0]})")
