@@ -27,6 +27,8 @@ from mpmath import mp
 DIGITS = 30
 # Relative size of a pivot, and distance of a layer from a clamped mode, below which rounding could decide a count.
 _DOUBTFUL = 1e-9
+# Relative rounding of one stiffness, from its sine, cosine and square root.
+_ROUNDING = 1e-15
 
 
 @dataclass(frozen=True)
@@ -88,13 +90,16 @@ def count_above(
     diagonal, off, turns, doubtful = _element(g[1:-1], w[1:-1], tau)
     doubt = doubtful.any(axis=0)
     count = turns.sum(axis=0)
-    pivot = None
+    pivot, error = None, np.zeros_like(q)
     for i in range(tau.shape[0] + 1):
         below = load[0] if i == 0 else diagonal[i - 1]
         above = load[1] if i == tau.shape[0] else diagonal[i]
         carry = np.zeros_like(q) if pivot is None else off[i - 1] ** 2 / pivot
+        # Stiffnesses of thin films nearly cancel; the rounding left is handed on, magnified, to the next pivot.
+        size = np.abs(below) + np.abs(above) + np.abs(carry)
+        error = _ROUNDING * size + (0.0 if pivot is None else np.abs(carry / pivot) * error)
         pivot = below + above - carry
-        doubt |= np.abs(pivot) < _DOUBTFUL * (np.abs(below) + np.abs(above) + np.abs(carry))
+        doubt |= np.abs(pivot) < np.maximum(_DOUBTFUL * size, 10 * error)
         pivot = np.where(pivot == 0, 1e-300, pivot)
         count = count + (pivot < 0)
     return count, doubt | ~np.isfinite(pivot) | (q < 0)
