@@ -175,6 +175,22 @@ def test_derivatives_of_coupled_cores():
         assert np.abs(mine.dn[[1, 3]] - single.dn[1] / 2).max() < 1e-4  # they do see each other
 
 
+@pytest.mark.parametrize("tm", [False, True], ids=["TE", "TM"])
+@pytest.mark.parametrize("barrier_um", [0.5, 5.0, 60.0, 500.0])
+def test_slopes_behind_a_barrier_of_any_depth(barrier_um, tm):
+    """A silicon film over 0.5 to 500 µm of oxide and a weaker film has the slopes it has alone."""
+    lam = 1.55
+    n, t = [1.0, 1.9, 1.444, 3.476, 1.0], [0.35, barrier_um, 0.3]
+    N = mode_index(n, t, lam, 0, tm)
+    slopes = mode_derivatives(N, n, t, lam, tm)
+    # N(c n, c wavelength) = c N: sum n dN/dn = N - wavelength dN/dwavelength
+    assert abs((np.array(n) * slopes.dn).sum() - (N - lam * slopes.dwavelength_per_um)) < 1e-12
+    alone = mode_derivatives(mode_index([1.444, 3.476, 1.0], [0.3], lam, 0, tm), [1.444, 3.476, 1.0], [0.3], lam, tm)
+    if barrier_um >= 5:  # the films do not see each other through more than 15 decay lengths
+        assert np.abs(slopes.dn[2:] - alone.dn).max() < 1e-9
+        assert abs(slopes.dt_per_um[2] - alone.dt_per_um[0]) < 1e-9
+
+
 def test_zero_thickness_and_split_layers_change_nothing():
     """A film of no thickness, or one cut in two, leaves every mode where it was."""
     for tm in (False, True):
