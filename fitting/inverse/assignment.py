@@ -62,20 +62,38 @@ def rank(layout: Layout, data: FilmReadings, label: IntArray, prior: Prior) -> l
     sc = cand.scene(layout, data, label)
     orders, theta = found.orders[:_REFINE], found.theta[:_REFINE]
     for _ in range(2):
-        fit = descend(layout, data, orders, theta, prior, max_steps=6, tolerance=1e-2)
+        fit = descend(layout, data, orders, theta, prior, robust=True, max_steps=10, tolerance=1e-2)
         keep = _hopeful(data, orders, fit)
         orders, theta = orders[keep], fit.theta[keep]
         again, _score = cand.assign(sc, theta)
         if np.array_equal(again, orders):
             break
-        orders, first = np.unique(again, axis=0, return_index=True)
-        theta = theta[first]
+        orders, theta = _distinct(again, theta)
+    orders, theta = _cut_far(layout, data, orders, theta, prior)
     orders, fit = _drop_strays(layout, data, orders, theta, prior)
     back = _take_back(sc, data, orders, fit)
-    if not np.array_equal(back, orders):
-        orders, first = np.unique(back, axis=0, return_index=True)
-        fit = descend(layout, data, orders, fit.theta[first], prior, max_steps=20, tolerance=1e-5)
+    grown = (back != orders).any(axis=1)
+    if grown.any():
+        more, again_fit = _drop_strays(layout, data, back[grown], fit.theta[grown], prior)
+        orders, theta = _distinct(np.concatenate([orders, more]), np.concatenate([fit.theta, again_fit.theta]))
+        fit = descend(layout, data, orders, theta, prior, max_steps=20, tolerance=1e-5)
     return _priced(sc, data, orders, fit)
+
+
+def _distinct(orders: IntArray, theta: Array) -> tuple[IntArray, Array]:
+    kept, first = np.unique(orders, axis=0, return_index=True)
+    return kept, theta[first]
+
+
+def _cut_far(
+    layout: Layout, data: FilmReadings, orders: IntArray, theta: Array, prior: Prior
+) -> tuple[IntArray, Array]:
+    """Beside each assignment the same without all that a robust fit leaves far off, at once."""
+    fit = descend(layout, data, orders, theta, prior, robust=True, max_steps=10, tolerance=1e-2)
+    far = (orders >= 0) & (fit.linear.residual**2 > 4 * stray_price(data))
+    some = far.any(axis=1) & ((orders >= 0) & ~far).any(axis=1)
+    cut = np.where(far, -1, orders)[some]
+    return _distinct(np.concatenate([orders, cut]), np.concatenate([fit.theta, fit.theta[some]]))
 
 
 def _take_back(sc: cand.Scene, data: FilmReadings, orders: IntArray, fit: Descent) -> IntArray:
@@ -119,8 +137,7 @@ def _drop_strays(
         branches = _without_one(layout, data, orders, fit, prior)
         if branches is None:
             break
-        orders, first = np.unique(branches[0], axis=0, return_index=True)
-        theta = branches[1][first]
+        orders, theta = _distinct(*branches)
     return orders, descend(layout, data, orders, theta, prior, max_steps=20, tolerance=1e-5)
 
 

@@ -16,6 +16,8 @@ from ..records import Array, BoolArray, IntArray
 
 # Added to the residual of a reading whose mode does not exist there, in units of its u: a wall, not a slope.
 ABSENT = 30.0
+# Residuals beyond this many u are gross errors until shown otherwise.
+HUBER = 5.0
 
 
 @dataclass(frozen=True)
@@ -82,24 +84,28 @@ def descend(
     prior: Prior,
     *,
     free: BoolArray | None = None,
+    robust: bool = False,
     max_steps: int = 30,
     tolerance: float = 1e-6,
 ) -> Descent:
     """Minimise residuals and priors for each row of theta (S, P) within the layout's bounds.
 
-    free: (P) or (S, P) booleans, False holds an unknown. tolerance: on the expected fall of the cost.
+    free: (P) or (S, P) booleans, False holds an unknown. tolerance: on the expected fall of the cost. robust: residuals
+    beyond `HUBER` count linearly (P. J. Huber, Ann. Math. Stat. 35, 73, 1964), so that a gross error does not drag the
+    fit along; the linearisation returned is the plain one all the same.
     """
     low, high = layout.bounds()
     theta = np.clip(theta, low, high)
     free = np.broadcast_to(np.ones(theta.shape, dtype=bool) if free is None else free, theta.shape)
     damping = np.full(theta.shape[0], 1e-4)
-    lin = linearise(layout, readings, theta, order)
+    weigh = _huber if robust else _plain
+    lin = weigh(linearise(layout, readings, theta, order))
     cost = lin.chi2 + prior.cost(theta)
     converged = np.zeros(theta.shape[0], dtype=bool)
     for _ in range(max_steps):
         step, gain = _step(lin, prior, theta, free, damping, low, high)
         trial = np.clip(theta + step, low, high)
-        new = linearise(layout, readings, trial, order)
+        new = weigh(linearise(layout, readings, trial, order))
         new_cost = new.chi2 + prior.cost(trial)
         better = new_cost <= cost
         theta = np.where(better[:, None], trial, theta)
@@ -110,7 +116,17 @@ def descend(
             break
         damping = np.where(better, damping * 0.1, damping * 10)
         converged |= damping > 1e12
-    return Descent(theta, cost, lin, converged)
+    return Descent(theta, cost, linearise(layout, readings, theta, order) if robust else lin, converged)
+
+
+def _plain(lin: Linear) -> Linear:
+    return lin
+
+
+def _huber(lin: Linear) -> Linear:
+    """Residuals and Jacobian scaled so that the square of a far residual grows as its size."""
+    weight = np.sqrt(np.minimum(1.0, HUBER / np.maximum(np.abs(lin.residual), 1e-9)))
+    return Linear(lin.residual * weight, lin.jacobian * weight[..., None], lin.exists, lin.predicted)
 
 
 def _pick(better: BoolArray, new: Linear, old: Linear) -> Linear:

@@ -10,9 +10,9 @@ import numpy as np
 from ..flags import flag
 from ..observables.film import predict
 from ..records import Array, Flag, IntArray
-from . import candidates as cand
 from .assignment import FAR, LABEL_PRICE, Assignment, rank, stray_price
 from .descent import Prior, descend, linearise
+from .hopeless import reach, remedies
 from .problem import SiteProblem, stack_sites
 
 # A fit less likely than this is called poor (common practice, no source).
@@ -87,28 +87,13 @@ def settle(problem: SiteProblem) -> Settled:
     if (label >= 0).any():
         ranked = _doubt_labels(problem, ranked, prior, out)
     if not ranked:
-        out.flags.append(flag("no_mode_possible", _reach(problem)))
+        out.flags += [flag("no_mode_possible", reach(problem)), *remedies(problem, None)]
         return out
     best = ranked[0]
     out.orders, out.theta, out.price = best.orders, best.theta, best.price
     out.rivals = tuple(ranked[1:])
     _judge(problem, out, best, labelled)
-    if out.withhold:
-        _doubt_polarisation(problem, best, prior, out)
     return out
-
-
-def _doubt_polarisation(problem: SiteProblem, best: Assignment, prior: Prior, out: Settled) -> None:
-    """Where little fits, see whether everything would with TE and TM exchanged."""
-    contexts = problem.layout.contexts
-    partner = [next((k for k, d in enumerate(contexts) if d == replace(c, tm=not c.tm)), None) for c in contexts]
-    mine = [partner[c] for c in problem.data.context[0]]
-    if any(k is None for k in mine):
-        return
-    swapped = replace(problem.data, context=np.array([mine]))
-    ranked = rank(problem.layout, swapped, np.full_like(problem.label, -1), prior)
-    if ranked and (ranked[0].orders >= 0).all() and ranked[0].price + LABEL_PRICE < best.price:
-        out.flags.append(flag("polarisation_doubtful"))
 
 
 def p_value(chi2: float, dof: int) -> float:
@@ -138,20 +123,13 @@ def _doubt_labels(problem: SiteProblem, ranked: list[Assignment], prior: Prior, 
     return free
 
 
-def _reach(problem: SiteProblem) -> str:
-    """What the readings state as effective indices, for the message that no film fits."""
-    sc = cand.scene(problem.layout, problem.data, problem.label)
-    low, high = float(np.min(sc.N)), float(np.max(sc.N))
-    return f"As stated, the readings mean effective indices from {low:.4f} to {high:.4f}."
-
-
 def _judge(problem: SiteProblem, out: Settled, best: Assignment, labelled: bool) -> None:
     """Flags and notes on strays and rivals."""
     used = best.orders >= 0
     rejected = int((~used).sum())
-    if not used.any():
+    if rejected * 2 > used.size:
         out.orders = out.theta = None
-        out.flags.append(flag("no_mode_possible", _reach(problem)))
+        out.rivals, out.flags = (), [flag("no_mode_possible", reach(problem)), *remedies(problem, best)]
         return
     if rejected:
         _explain_strays(problem, out, best)
@@ -159,6 +137,7 @@ def _judge(problem: SiteProblem, out: Settled, best: Assignment, labelled: bool)
         if rejected * 3 > used.size or unchecked:
             out.flags.append(flag("many_rejected", f"{rejected} of {used.size} readings."))
             out.withhold = True
+            out.flags += remedies(problem, best)
     doubt = 1 - best.probability
     if doubt > AMBIGUOUS:
         decide = _deciding_reading(problem, best, out.rivals[0]) if out.rivals else ""

@@ -3,8 +3,12 @@
 from __future__ import annotations
 
 import pytest
+from layerlot.fitting.inverse import fit_table
+from layerlot.fitting.stack import parse_stack
 
 from tests.fitting.orders import STUDIED, summary, verdicts
+from tests.fitting.synthetic import readings_of
+from tests.reference.truth import draw_tables, spoil
 
 
 def test_no_wrong_order_goes_unflagged():
@@ -28,3 +32,11 @@ def test_orders_of_500_sites():
     decidable = [v for v in found if v.decidable]
     clean = sum(v.right and not v.flagged for v in decidable)
     assert clean >= 0.95 * len(decidable), summary(found)
+
+
+def test_gross_error_does_not_double_the_orders():
+    """A whole-degree error on a thick film, once answered with every order doubled, leaves the true orders standing."""
+    table = spoil(draw_tables("thick_uniaxial_polymer", 240, 5, 33, labelled=False)[35], "whole_degree", 33 + 35)
+    result = fit_table(parse_stack(table.stack_toml, "synthetic.toml"), readings_of(table.rows))
+    found = [r.order if r.used else None for site in result.sites for r in site.readings]
+    assert found == list(table.orders)
