@@ -152,8 +152,9 @@ def polish(stack: Stack, N: Complex, outgoing: Flags) -> tuple[Complex, Flags]:
         act = act[ok & ~ready]
         if not act.size:
             break
-    # Rounding can keep the last step just above the limit: a root is a root if it no longer moves by 1e-13.
-    done[act[size[ok & ~ready] <= 1e-13]] = True if act.size else done[act]
+    else:
+        # Rounding can keep the last step just above the limit: a root is a root if it no longer moves by 1e-13.
+        done[act[size[ok & ~ready] <= 1e-13]] = True
     return np.sqrt(best), done
 
 
@@ -231,15 +232,33 @@ def _companion(n: Array, normal: Array | None, t: Array, lam: Array, tm: Flags, 
         n, t, normal = n[:, 1:], t[:, 1:], None if normal is None else normal[:, 1:]
         seed = mode_index(n, t, lam, order, tm, normal)
     else:
-        # A wall at the film's foot: the odd modes of the stack and its mirror image.
-        def mirror(x: Array) -> Array:
-            return np.concatenate([x[:, :1:-1], x[:, 1:]], axis=1)
-
-        twice = np.concatenate([t[:, :0:-1], 2 * t[:, :1], t[:, 1:]], axis=1)
-        both = mirror(n), None if normal is None else mirror(normal)
-        seed = mode_index(both[0], twice, lam, 2 * order + 1, tm, both[1])
+        seed = _walled(n, normal, t, lam, tm, order)
     thick = t[:, film - (2 if film > 1 else 1)]
     return seed, (2 * order + 3) * (lam / (2 * np.maximum(thick, 1e-6))) ** 2 / (2 * np.where(seed > 0, seed, 1.0))
+
+
+def _walled(n: Array, normal: Array | None, t: Array, lam: Array, tm: Flags, order: Array) -> Array:
+    """Real effective index (B) of a film that lies on the high-index half-space: its mode over a wall.
+
+    The modes of the stack and its mirror image: odd ones vanish at the wall. A TM wave steeper than Brewster's angle
+    comes back from the half-space without the change of sign (at that angle not at all), as over a wall where the
+    slope vanishes: even modes. Along the modes' path the phase turns so that the order stays.
+    """
+
+    def mirror(x: Array) -> Array:
+        return np.concatenate([x[:, :1:-1], x[:, 1:]], axis=1)
+
+    twice = np.concatenate([t[:, :0:-1], 2 * t[:, :1], t[:, 1:]], axis=1)
+    both = mirror(n), None if normal is None else mirror(normal)
+    odd = mode_index(both[0], twice, lam, 2 * order + 1, tm, both[1])
+    if not tm.any():
+        return odd
+    even = mode_index(both[0], twice, lam, 2 * order, tm, both[1])
+    at = np.where(np.isfinite(odd), odd, even)
+    m = n if normal is None else normal
+    # w kappa of the film and of the half-space, in k0
+    film, outer = (np.sqrt(np.maximum(1 - (at / m[:, i]) ** 2, 0)) / n[:, i] for i in (1, 0))
+    return np.where(tm & (film > outer), even, odd)
 
 
 def leaky_derivatives(
