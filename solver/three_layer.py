@@ -28,6 +28,7 @@ _STEPS = 80
 # What a third-order step leaves, in radians of phi, when it counts as converged.
 _DONE = 1e-16
 _TINY = 1e-30
+_OPEN = -1.0  # marks a mode that needs more steps
 _HALF_PI = np.pi / 2
 
 
@@ -58,28 +59,35 @@ def three_layer_index(
 
     n, n_normal: (B, 3); t_um: (B, 1); the rest (B). See `slab.mode_index`.
     """
-    parts = [slice(i, i + _BLOCK) for i in range(0, order.size, _BLOCK)]
 
-    def run(p: slice) -> Array:
+    def run(p: Any, finish: bool) -> Array:
         if n_normal is None:
-            return _isotropic(n[p], t_um[p, 0], wavelength_um[p], tm[p], order[p])
-        return solve_layers(flatten(n[p], n_normal[p], t_um[p], wavelength_um[p], tm[p], order[p].shape), order[p])
+            return _isotropic(n[p], t_um[p, 0], wavelength_um[p], tm[p], order[p], finish)
+        layers = flatten(n[p], n_normal[p], t_um[p], wavelength_um[p], tm[p], order[p].shape)
+        return solve_layers(layers, order[p], finish)
 
-    if len(parts) <= 1:
-        return run(slice(None))
+    if order.size <= _BLOCK:
+        return run(slice(None), True)
+    parts = [slice(i, i + _BLOCK) for i in range(0, order.size, _BLOCK)]
     # numpy lets go of the interpreter lock inside its loops: two threads share the blocks
-    with ThreadPoolExecutor(min(_THREADS, len(parts))) as pool:
-        return np.concatenate(list(pool.map(run, parts)))
+    with ThreadPoolExecutor(_THREADS) as pool:
+        N = np.concatenate(list(pool.map(lambda p: run(p, False), parts)))
+    # The few modes that the free steps leave open are cheaper together than block by block.
+    rest = np.flatnonzero(N == _OPEN)
+    if rest.size:
+        N[rest] = run(rest, True)
+    return N
 
 
-def solve_layers(layers: Layers, order: Array) -> Array:
-    """Effective index of one block (B), NaN where it is not guided."""
+def solve_layers(layers: Layers, order: Array, finish: bool = True) -> Array:
+    """Effective index of one block (B), NaN where it is not guided; `_OPEN` where unsettled, if not to be finished."""
     with np.errstate(invalid="ignore", divide="ignore"):
-        s = _wave_number(_edge(layers, order), order)
-        return np.asarray(np.sqrt((layers.a[1] - layers.w[1] * s * s) / layers.b[1]))
+        s = _wave_number(_edge(layers, order), order, finish)
+        N = np.sqrt((layers.a[1] - layers.w[1] * s * s) / layers.b[1])
+    return np.asarray(N) if finish else np.where(s == _OPEN, _OPEN, N)
 
 
-def _isotropic(n: Array, t_um: Array, wavelength_um: Array, tm: Array, order: Array) -> Array:
+def _isotropic(n: Array, t_um: Array, wavelength_um: Array, tm: Array, order: Array, finish: bool) -> Array:
     """As `solve_layers` for isotropic layers, whose coefficients need no setting up; here s is sqrt(n_film^2 - N^2),
     so that R_i^2 = r_i (n_film^2 - n_i^2 - s^2) with r_i = (n_film / n_i)^4 for TM and 1 for TE."""
     square = np.ascontiguousarray(n.T)
@@ -90,31 +98,35 @@ def _isotropic(n: Array, t_um: Array, wavelength_um: Array, tm: Array, order: Ar
         gap = film - high
         tau = t_um * (2 * np.pi / wavelength_um)
         edge = _Edge(np.sqrt(gap), tau, order * np.pi, dl * gap, dl, do * (film - low), do, np.sqrt(dl))
-        s = _wave_number(edge, order)
-        return np.asarray(np.sqrt(film - s * s))
+        s = _wave_number(edge, order, finish)
+        N = np.sqrt(film - s * s)
+    return np.asarray(N) if finish else np.where(s == _OPEN, _OPEN, N)
 
 
-def _wave_number(edge: _Edge, order: Array) -> Array:
+def _wave_number(edge: _Edge, order: Array, finish: bool) -> Array:
     """s of each mode, NaN where it is not guided."""
     # At cut-off the limiting half-space adds nothing to the phase.
     other = np.sqrt(np.maximum(edge.bo - edge.do * edge.top * edge.top, 0.0))
     excess = edge.top * edge.tau - edge.mpi - np.arctan(other / edge.top)
     guided = (excess > 0) & (order >= 0)
     if guided.all():
-        return _settled(edge, excess)
+        return _settled(edge, excess, finish)
     s = np.full(order.size, np.nan)
     rows = np.flatnonzero(guided)
     if rows.size:
-        s[rows] = _settled(edge.take(rows), excess[rows])
+        s[rows] = _settled(edge.take(rows), excess[rows], finish)
     return s
 
 
-def _settled(edge: _Edge, excess: Array) -> Array:
-    s, settled = _solve(edge, excess)
-    if not settled.all():
-        rest = np.flatnonzero(~settled)
-        few = edge.take(rest)
-        s[rest] = few.top * _bracketed(few)
+def _settled(edge: _Edge, excess: Array, finish: bool) -> Array:
+    s, settled = _solve(edge, excess, _EXTRA_STEPS if finish else 0)
+    if settled.all():
+        return s
+    if not finish:
+        return np.where(settled, s, _OPEN)
+    rest = np.flatnonzero(~settled)
+    few = edge.take(rest)
+    s[rest] = few.top * _bracketed(few)
     return s
 
 
@@ -136,7 +148,7 @@ def _half_space(layers: Layers, over: Array, i: int) -> tuple[Array, Array]:
     return scale * (a[1] * share - a[i] / w[i]), scale * w[1] * share
 
 
-def _solve(e: _Edge, excess: Array) -> tuple[Array, NDArray[np.bool_]]:
+def _solve(e: _Edge, excess: Array, extra: int) -> tuple[Array, NDArray[np.bool_]]:
     """s of the mode after a fixed number of free steps, and whether they were enough.
 
     Two steps in single precision come within its rounding at half the cost, one in double precision does the rest.
@@ -161,10 +173,10 @@ def _solve(e: _Edge, excess: Array) -> tuple[Array, NDArray[np.bool_]]:
     _, step, half, first = _halley(sin, cos, e)
     sin, cos = _turn(sin, cos, np.minimum(np.maximum(step, -0.7 * cos), 0.7 * sin))
     settled = _left(first, half) <= _DONE
-    if not settled.all():
+    if extra and not settled.all():
         rest = np.flatnonzero(~settled)
         few = e.take(rest)
-        for _ in range(_EXTRA_STEPS):
+        for _ in range(extra):
             _, step, half, first = _halley(sin[rest], cos[rest], few)
             step = np.minimum(np.maximum(step, -0.7 * cos[rest]), 0.7 * sin[rest])
             sin[rest], cos[rest] = _turn(sin[rest], cos[rest], step)
