@@ -10,9 +10,9 @@ from __future__ import annotations
 from dataclasses import dataclass
 from itertools import pairwise
 
-from .figures import looks_numeric
+from .figures import clean, looks_numeric
 from .grid import Cell, Grid, is_blank
-from .headings import PER_UM, READINGS, Heading, combine, neat, parse_heading, to_um, unit_of
+from .headings import PER_UM, READINGS, Heading, combine, parse_heading, to_um, unit_of
 from .titles import Context, from_rows
 
 MAX_HEADING_ROWS = 3
@@ -153,7 +153,7 @@ def _stack(grid: Grid, top: int, bottom: int, column: int, lowest: int | None = 
         if is_blank(value) and row < lowest:
             value = _group_to_the_left(grid, row, lowest, column)
         if not is_blank(value):
-            text = neat(str(value))
+            text = clean(str(value)).lstrip("#% ")
             if not texts or texts[-1] != text:
                 texts.append(text)
     return texts

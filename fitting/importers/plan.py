@@ -73,6 +73,7 @@ def make_plan(table: Table, context: Context, findings: Findings) -> Plan | None
     if not _right_kind(table, findings):
         return None
     _refuse_repeats(table, findings)
+    _refuse_air_wavelengths(table, findings)
     single = {column.heading.meaning: column for column in table.columns if column.heading.meaning in SINGLE}
     plan = Plan(table, {str(k): v for k, v in single.items()}, {}, (), _style(table))
     plan = replace(plan, readings=_reading_columns(plan, context, findings))
@@ -115,6 +116,16 @@ def _right_kind(table: Table, findings: Findings) -> bool:
         )
         return False
     return True
+
+
+def _refuse_air_wavelengths(table: Table, findings: Findings) -> None:
+    for column in table.having("air_wavelength"):
+        findings.fault(
+            table.grid.place(table.header, column.index, column.heading.text),
+            "wavelengths in air",
+            "vacuum wavelengths are required unless the stack file says otherwise (they differ by 3 in 10,000)",
+            'head it wavelength_nm and write wavelength_reference = "air" in the stack file, or convert it',
+        )
 
 
 def _refuse_repeats(table: Table, findings: Findings) -> None:
@@ -354,7 +365,7 @@ def _needed(plan: Plan, context: Context, findings: Findings) -> None:
                 "one wavelength for each reading is required",
                 "add a column wavelength_nm",
             )
-        elif not known and not _says_wavelength_below(plan):
+        elif not (known or plan.table.having("air_wavelength") or _says_wavelength_below(plan)):
             findings.fault(
                 place,
                 "no wavelength: no column, and none in the title, the sheet's name or the headings",

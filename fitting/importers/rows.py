@@ -6,9 +6,10 @@ summary (mean, sd, ...), a repeated heading, a row of units, or a note. Everythi
 
 from __future__ import annotations
 
+from collections import defaultdict
 from collections.abc import Callable
 from dataclasses import dataclass
-from typing import TypeVar
+from typing import TypeVar, cast
 
 from ..records import Quantity, Reading
 from . import fields
@@ -73,6 +74,7 @@ class RowReader:
         self.blank_cells = 0
         self.notes: list[str] = []
         self.s_or_p = False
+        self.known: dict[str, dict[tuple[type, Cell], object]] = defaultdict(dict)
 
     def _has_entries(self, index: int | None) -> bool:
         table = self.plan.table
@@ -245,13 +247,22 @@ class RowReader:
         if column is None:
             return None
         value = self.grid.merged_down(row, column.index)
+        if value is None:
+            return None
+        known = self.known[meaning]  # most cells of such a column repeat: each figure is read once
+        key = (value.__class__, value)
+        if key in known:
+            return cast("T", known[key])
         if is_blank(value):
             return None
         try:
-            return read(value)
+            found = read(value)
         except Unreadable as problem:
             self._refuse(row, meaning, column.index, column.heading.text, problem)
             return None
+        if meaning != "measured_at":  # it may depend on a time of day in another column
+            known[key] = found
+        return found
 
     def _facts(self, row: int) -> RowFacts:
         style, units = self.plan.style, self.plan.units

@@ -81,21 +81,27 @@ def _decode(name: str, data: bytes, findings: Findings) -> tuple[str, str] | Non
 
 
 def _separator(lines: list[str]) -> str:
-    """The separator that makes most headings readable; ties go to the one standing first in SEPARATORS."""
-    best, best_score = "", -math.inf
-    for separator in SEPARATORS:
-        score = -math.inf
-        for line in lines:
-            cells = _fields(line, separator)
-            known = sum(parse_heading(cell).known for cell in cells if cell)
-            filled = sum(1 for cell in cells if cell)
-            if known >= 2:
-                score = max(score, known - 0.5 * (filled - known))
-        if score > best_score:
-            best, best_score = separator, score
-    if not best:
-        counts = {mark: sum(mark in line for line in lines) for mark in "\t;|,"}
-        best = max(counts, key=lambda mark: counts[mark])
+    """The separator that makes most headings readable; ties go to the one standing first in SEPARATORS.
+
+    Blanks separate only where no mark does: a heading such as `Angle θ [°]` holds blanks of its own.
+    """
+    for group in ("\t;|,", ("  ", " ")):
+        scores = {separator: _understood(lines, separator) for separator in group}
+        best = max(scores, key=lambda separator: scores[separator])
+        if scores[best] > -math.inf:
+            return best
+    counts = {mark: sum(mark in line for line in lines) for mark in "\t;|,"}
+    return max(counts, key=lambda mark: counts[mark])
+
+
+def _understood(lines: list[str], separator: str) -> float:
+    """How well the best line reads as headings under a separator; minus infinity where fewer than two are known."""
+    best = -math.inf
+    for line in lines:
+        cells = [cell for cell in _fields(line, separator) if cell]
+        known = sum(parse_heading(cell).known for cell in cells)
+        if known >= 2:
+            best = max(best, known - 0.5 * (len(cells) - known))
     return best
 
 
@@ -118,7 +124,7 @@ def _split(name: str, text: str, lines: list[str], separator: str, findings: Fin
             rows.append(tuple(cell.strip() or None for cell in cells))
     except csv.Error as error:
         findings.fault(
-            Place(name, None, reader.line_num),
+            Place(name, None, len(rows) + 1),
             f"the line cannot be split into columns ({error})",
             "one row a line is required",
             "look for a quotation mark that is opened and not closed",

@@ -186,7 +186,7 @@ CASES = [
         "row 3/column C",
         ("0.6328 nm", "in µm", "unit in the heading"),
     ),
-    Case("nm under µm", heading("wavelength_nm", "λ (µm)"), 'row 2/column C "λ (μm)"', ("632.8 µm", "in nm")),
+    Case("nm under µm", heading("wavelength_nm", "λ (µm)"), 'row 2/column C "λ (µm)"', ("632.8 µm", "in nm")),
     Case("nm under Å", heading("wavelength_nm", "λ (Å)"), "row 2/column C", ("632.8 Å", "in nm")),
     Case(
         "degrees over wavelengths",
@@ -487,7 +487,6 @@ CASES = [
         "row 2",
         ("3 fields under a heading of 4", "missing separator"),
     ),
-    Case("thousands or decimals", content("site;x_mm;wavelength_nm;pol;angle_deg\n1;1,250;632;TE;12\n"), "", ()),
     Case(
         "two decimal marks",
         content("site;wavelength_nm;pol;angle_deg\n1;632.8;TE;12.61\n2;632.8;TE;12,345\n"),
@@ -497,11 +496,10 @@ CASES = [
     Case(
         "a quotation mark left open",
         content('site,wavelength_nm,pol,angle_deg\n1,632.8,TE,"12.61\n' + "2,632.8,TE,12.7\n" * 9000),
-        "row 8194",
+        "row 2",
         ("cannot be split", "quotation mark"),
     ),
 ]
-CASES = [case for case in CASES if case.name != "thousands or decimals"]
 by_name = pytest.mark.parametrize("case", CASES, ids=lambda case: case.name.replace(" ", "-"))
 
 

@@ -328,6 +328,7 @@ def test_encodings_and_gz(tmp_path: Path, encoding: str, packed: bool) -> None:
 @pytest.mark.parametrize(
     "content",
     [
+        "site\tλ (nm)\tpol\tmode\tAngle θ [°]\nc\t632.8\tTE\t0\t12.61\n",
         "sep=;\nsite;wavelength_nm;pol;mode;angle_deg\nc;632.8;TE;0;12.61\n",
         "# lambda = 632.8 nm\n# site pol mode angle_deg\nc TE 0 12.61\n",
         "site   wavelength (nm)   pol   mode   angle (deg)\nc      632.8             TE    0      12.61\n",
