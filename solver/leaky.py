@@ -171,7 +171,7 @@ def leaky_index(
     n (..., L), real or complex, from the substrate up; other arguments as for `slab.mode_index`. The order is that of
     the closed companion: the stack without the half-space that radiates, or, where the film lies on it directly, with
     a wall there. NaN where the companion has no such mode, where both half-spaces radiate, or where Newton has left
-    the mode.
+    the mode or crossed a light line.
     """
     n_, t, lam, shape, normal, is_tm, m = _batch(n, t_um, wavelength_um, order, tm, n_normal)
     seed, step = _companion(n_.real, None if normal is None else normal.real, t, lam, is_tm, m)
@@ -182,6 +182,8 @@ def leaky_index(
         outgoing = _radiates(stack, seed[known])
         root, done = polish(stack, seed[known].astype(complex), outgoing)
         stays = done & (np.abs(root.real - seed[known]) < _FARTHEST_SHARE * step[known])
+        # Across a light line the other branch would hold: such a root is no mode.
+        stays &= (_radiates(stack, root.real) == outgoing).all(axis=0)
         # A leak below rounding must not come out as gain.
         root = np.where((root.imag > 0) & (root.imag < _ROUNDING), root.real + 0j, root)
         out[known] = np.where(stays, root, np.nan)
