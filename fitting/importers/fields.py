@@ -151,3 +151,8 @@ def moment(day: Cell, clock: Cell = None) -> str:
     if clock is not None and re.fullmatch(r"\d{4}-\d{2}-\d{2}", text):
         text = f"{text}T{clock.isoformat('minutes') if isinstance(clock, datetime.time) else plain_text(clock)}"
     return text
+
+
+def titled_moment(said: str | None) -> str | None:
+    """The date of a title in the form that `moment` gives."""
+    return None if said is None else moment(said)

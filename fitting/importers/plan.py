@@ -311,10 +311,12 @@ def _wavelength_unit(plan: Plan, findings: Findings) -> str:
                 values.append(number(value, plan.style, 0.2, 3000.0))
             except Unreadable:
                 continue  # a figure with its own unit, or refused with its reason when the row is read
-    if not values or all(200.0 <= value <= 3000.0 for value in values):
-        return "nm"
-    if all(0.2 <= value <= 3.0 for value in values):
-        return "um"
+    nm = not values or all(200.0 <= value <= 3000.0 for value in values)
+    if nm or all(0.2 <= value <= 3.0 for value in values):
+        unit = "nm" if nm else "um"
+        said = f"'{column.heading.text}' states no unit: read as {UNIT_WORDS[unit]} unless a cell has its own"
+        findings.remark(table.grid.place(table.header), said)
+        return unit
     odd = next(value for value in values if not 200.0 <= value <= 3000.0)
     findings.fault(
         table.grid.place(table.header, column.index, column.heading.text),

@@ -1,7 +1,7 @@
 """The rows of one table into readings.
 
-A row is left out, and listed, when it holds no reading (blank, or a mark such as "no dip", "-", "n/a"), when it is a
-summary (mean, sd, ...), a repeated heading, a row of units, or a note. Everything else that does not fit is a fault.
+`row_kinds` says which rows hold readings; here everything that does not fit in one of them is a fault, and all faults
+of a row are told at once.
 """
 
 from __future__ import annotations
@@ -13,13 +13,12 @@ from typing import TypeVar, cast
 
 from ..records import Quantity, Reading
 from . import fields
-from .figures import Unreadable, clean, looks_numeric, split_note
+from .figures import Unreadable, clean, split_note
 from .grid import Cell, Findings, is_blank
-from .identity import LEVELS, Identity
 from .modes import mode_label, polarisation
-from .plan import Plan, ReadingColumn, unit_row_index
-from .titles import Context, from_text
-from .vocabulary import NO_READING, is_summary
+from .plan import Plan, ReadingColumn
+from .row_kinds import RowSorter
+from .titles import Context
 
 T = TypeVar("T")
 V = TypeVar("V", str, int, float)
@@ -60,12 +59,8 @@ class RowReader:
     def __init__(self, plan: Plan, context: Context, findings: Findings) -> None:
         self.plan = plan
         self.grid = plan.table.grid
-        self.context = context
         self.findings = findings
-        filled = tuple(level for level in LEVELS if self._has_entries(plan.index(level)))
-        self.identity = Identity(filled, {k: v for k, v in context.names.items() if k in LEVELS})
-        self.headings = {self.grid.rows[row] for row in range(plan.table.top, plan.table.header + 1)}
-        self.unit_row = unit_row_index(plan.table)
+        self.sorter = RowSorter(plan, context, findings)
         self.heading_has_unit = (
             plan.single["wavelength"].heading.unit is not None if "wavelength" in plan.single else False
         )
@@ -76,127 +71,9 @@ class RowReader:
         self.s_or_p = False
         self.known: dict[str, dict[tuple[type, Cell], object]] = defaultdict(dict)
 
-    def _has_entries(self, index: int | None) -> bool:
-        table = self.plan.table
-        return index is not None and any(
-            not is_blank(self.grid.cell(row, index)) for row in range(table.start, table.stop)
-        )
-
     def read(self) -> list[Reading]:
         """All readings of the table, top to bottom."""
-        readings: list[Reading] = []
-        table = self.plan.table
-        for row in range(table.start, table.stop):
-            cells = self.grid.rows[row][table.left : table.right]
-            filled = [value for value in cells if not is_blank(value)]
-            if not filled:
-                if not self._inside_merge(row):
-                    self.identity.blank_row()
-            elif self._is_data(row, filled):
-                readings += self._row(row)
-        return readings
-
-    def _inside_merge(self, row: int) -> bool:
-        return bool(self.grid.merged) and any(
-            not is_blank(self.grid.merged_down(row, c.index)) for c in self.plan.table.columns
-        )
-
-    # --- which rows are data -----------------------------------------------------------------------------------
-
-    def _is_data(self, row: int, filled: list[Cell]) -> bool:
-        """Whether a row is to be read; if not, it is listed with the reason, and lines that name things are heeded."""
-        place = self.grid.place(row)
-        summary = self._summary_word(row, filled[0])
-        if row == self.unit_row or self.grid.rows[row] in self.headings or summary:
-            reason = f"summary row ('{summary}')" if summary else "the heading repeated"
-            self.findings.skip(place, "units of the columns" if row == self.unit_row else reason)
-            return False
-        if self.grid.is_text and not self._whole(row, len(filled)):
-            return False
-        holds = [c for c in self.plan.readings if not fields.no_reading(self.grid.cell(row, c.index))]
-        unvalued = [c for c in self.plan.readings if (row, c.index) in self.grid.unvalued]
-        if len(filled) == 1 and isinstance(filled[0], str) and not looks_numeric(filled[0]) and not unvalued:
-            self._line(row, filled[0])
-            return False
-        if holds or unvalued:
-            return True
-        self._without_reading(row, filled)
-        return False
-
-    def _summary_word(self, row: int, first: Cell) -> str | None:
-        candidates = [first] + [
-            self.grid.cell(row, i) for k in (*LEVELS, "mode") if (i := self.plan.index(k)) is not None
-        ]
-        return next((value for value in candidates if isinstance(value, str) and is_summary(value)), None)
-
-    def _whole(self, row: int, filled: int) -> bool:
-        """Whether a text row has as many fields as the heading; a lost or surplus separator shifts every number."""
-        cells = self.grid.rows[row]
-        expected = len(self.grid.rows[self.plan.table.header])
-        surplus = any(not is_blank(value) for value in cells[expected:])
-        if filled == 1 or (len(cells) >= expected and not surplus):
-            return True
-        self.findings.fault(
-            self.grid.place(row),
-            f"{len(cells)} fields under a heading of {expected}",
-            "as many fields as headings are required",
-            "look for a missing separator, or a decimal comma in a file separated by commas (then use semicolons)",
-        )
-        return False
-
-    def _line(self, row: int, text: str) -> None:
-        """A row with one text cell: it names what follows, or it is a note."""
-        place = self.grid.place(row)
-        index = next(i for i, value in enumerate(self.grid.rows[row]) if not is_blank(value))
-        level = next((name for name in LEVELS if self.plan.index(name) == index), None)
-        said = from_text(text)
-        short = len(text.split()) <= 2 and any(mark.isdigit() for mark in text)
-        names = {k: v for k, v in said.names.items() if k in LEVELS}
-        if said.wavelengths_um or names or (said.pol and len(text.split()) <= 3):
-            self.context = said.over(self.context)
-            self.identity.given = {k: v for k, v in self.context.names.items() if k in LEVELS}
-            self.identity.heading({k: v for k, v in names.items() if k in self.identity.columns})
-            self.findings.skip(place, f"line '{text}', heeded for the rows below it")
-        elif level is not None and short:
-            self.identity.heading({level: fields.name(text)})
-            self.findings.skip(place, f"{level} '{text}' named for the rows below it")
-        elif clean(text).casefold() in NO_READING:
-            self.findings.skip(place, "no reading")
-        else:
-            self.findings.skip(place, f"note ('{text}')")
-
-    def _without_reading(self, row: int, filled: list[Cell]) -> None:
-        place = self.grid.place(row)
-        marks = [str(v) for c in self.plan.readings if not is_blank(v := self.grid.cell(row, c.index))]
-        try:
-            stated = self._stated(row)
-        except Unreadable as problem:
-            self.findings.skip(place, f"no reading ({problem.was})")
-            return
-        others = len(filled) - len([k for k in LEVELS if not is_blank(self._cell(row, k))])
-        if stated and not marks and others == 0:
-            self.identity.heading(stated)
-            self.findings.skip(
-                place, "names only, heeded for the rows below: " + ", ".join(f"{k} {v}" for k, v in stated.items())
-            )
-            return
-        if stated:
-            self.identity.heading(stated)
-        self.findings.skip(place, f"no reading ('{marks[0]}')" if marks else "no reading (the cell is blank)")
-
-    # --- one row -----------------------------------------------------------------------------------------------
-
-    def _cell(self, row: int, meaning: str) -> Cell:
-        index = self.plan.index(meaning)
-        return None if index is None else self.grid.merged_down(row, index)
-
-    def _stated(self, row: int) -> dict[str, str]:
-        stated = {}
-        for level in self.identity.columns:
-            value = self._cell(row, level)
-            if not is_blank(value):
-                stated[level] = fields.name(value)
-        return stated
+        return [reading for row in self.sorter.data_rows() for reading in self._row(row)]
 
     def _row(self, row: int) -> list[Reading]:
         if row in self.grid.hidden_rows:
@@ -268,14 +145,14 @@ class RowReader:
         style, units = self.plan.style, self.plan.units
         stated: dict[str, str] = {}
         faults = len(self.findings.faults)
-        for level in self.identity.columns:
+        for level in self.sorter.identity.columns:
             value = self._field(row, level, fields.name)
             if value is not None:
                 stated[level] = value
         site: tuple[str | None, str | None, str | None] = (None, None, None)
         if len(self.findings.faults) == faults:
             try:
-                site = self.identity.row(stated)
+                site = self.sorter.identity.row(stated)
             except Unreadable as problem:
                 self._refuse(row, "site", None, None, problem)
         unit = units.get("wavelength", "nm")
@@ -300,7 +177,7 @@ class RowReader:
             column = self.plan.single["mode"]
             self.findings.fault(
                 self.grid.place(row, column.index, column.heading.text),
-                f"mode label '{self._cell(row, 'mode')}' beside polarisation {pol}",
+                f"mode label '{self.sorter.cell(row, 'mode')}' beside polarisation {pol}",
                 "label and polarisation must agree",
                 "correct one of the two",
             )
@@ -326,7 +203,7 @@ class RowReader:
                 row, "temperature_C", lambda v: fields.celsius(v, style, units.get("temperature_C", "C"))
             ),
             "tool": self._field(row, "tool", fields.name),
-            "measured_at": self._field(row, "measured_at", lambda v: fields.moment(v, self._cell(row, "clock"))),
+            "measured_at": self._field(row, "measured_at", lambda v: fields.moment(v, self.sorter.cell(row, "clock"))),
         }
         self.carried |= {key: value for key, value in found.items() if value is not None}
         return self.carried
@@ -352,13 +229,13 @@ class RowReader:
             self._refuse(row, column.quantity, column.index, column.heading, problem)
             return None
         wavelength = self._wavelength(row, column, facts)
-        pol = self._agreed(row, column, "polarisation", column.pol, facts.pol) or self.context.pol
+        pol = self._agreed(row, column, "polarisation", column.pol, facts.pol) or self.sorter.context.pol
         order = self._agreed(row, column, "mode", column.order, facts.order)
-        if pol is None and self._cell(row, "pol") in (None, ""):  # an unreadable one has had its fault
+        if pol is None and self.sorter.cell(row, "pol") in (None, ""):  # an unreadable one has had its fault
             self._refuse(row, "pol", self.plan.index("pol"), None, Unreadable("no polarisation", "fill in TE or TM"))
         if pol is None or wavelength is None:
             return None
-        names = self.context.names
+        names = self.sorter.context.names
         extras = facts.extras
         temperature = extras.get("temperature_C", names.get("temperature_C"))
         return Reading(
@@ -372,7 +249,7 @@ class RowReader:
             *facts.site,
             x_mm=_float(extras.get("x_mm")),
             y_mm=_float(extras.get("y_mm")),
-            measured_at=_text(extras.get("measured_at", names.get("measured_at"))),
+            measured_at=_text(extras.get("measured_at", fields.titled_moment(names.get("measured_at")))),
             temperature_C=_float(temperature),
             tool=_text(extras.get("tool", names.get("tool"))),
         )
@@ -389,7 +266,7 @@ class RowReader:
 
     def _wavelength(self, row: int, column: ReadingColumn, facts: RowFacts) -> float | None:
         stated = self._agreed(row, column, "wavelength (µm)", column.wavelength_um, facts.wavelength_um)
-        titled = self.context.wavelengths_um
+        titled = self.sorter.context.wavelengths_um
         index = self.plan.index("wavelength")
         if stated is not None:
             if titled and not any(abs(stated - value) <= ONE_LASER * value for value in titled):

@@ -195,7 +195,7 @@ def _remarks(plan: Plan, context: Context, readings: list[Reading], reader: RowR
     if len(angles) >= 4 and max(angles) < 1.5708:
         local.remark(place, "all angles lie below 1.571; they are taken as degrees, as the heading says")
     if len(plan.readings) > 1 and reader.blank_cells:
-        local.remark(place, f"{reader.blank_cells} cells without a reading in rows that hold others")
+        local.remark(place, f"cells without a reading in rows that hold others: {reader.blank_cells}")
     if reader.notes:
         local.remark(place, "notes in cells of readings: " + "; ".join(reader.notes[:FAULTS_OF_A_KIND]))
     if reader.s_or_p:

@@ -111,9 +111,14 @@ def from_text(value: str) -> Context:
     names = {}
     for key, pattern in _NAMES.items():
         named = pattern.search(text)
-        if named and (named.group(1) or any(mark.isdigit() for mark in named.group(2))):
+        if named and (named.group(1) or _is_name(named.group(2))):
             names[key] = named.group(2).strip()
     return Context(tuple(dict.fromkeys(wavelengths)), pols.pop() if len(pols) == 1 else None, names, *_quantity(text))
+
+
+def _is_name(word: str) -> bool:
+    """`Lot A17` and `Lot B` name a lot, `Lot release` and `Wafer map` do not."""
+    return any(mark.isdigit() for mark in word) or (len(word) == 1 and word.isupper())
 
 
 def _quantity(text: str) -> tuple[str | None, str | None]:

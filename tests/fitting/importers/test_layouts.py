@@ -350,6 +350,20 @@ def test_text_layouts(tmp_path: Path, content: str) -> None:
     assert reading.measured_at in (None, "2031-05-17T14:20")
 
 
+def test_sections_with_their_own_wavelength(tmp_path: Path) -> None:
+    """A line between the rows that states the wavelength holds for the rows below it, and a titled date becomes ISO."""
+    content = (
+        "Lot B, Wafer 12\nDate: 17.05.2031\n\nsite;pol;m;angle (deg)\n"
+        "λ = 632.8 nm;;;\n1;TE;0;12.61\nλ = 1550 nm;;;\n1;TE;0;5.61\n"
+    )
+    imported = good(text(tmp_path / "a.csv", content))
+    assert brief(imported.readings) == [
+        ("B", "12", "1", 632.8, "TE", 0, 12.61),
+        ("B", "12", "1", 1550.0, "TE", 0, 5.61),
+    ]
+    assert {r.measured_at for r in imported.readings} == {"2031-05-17"}
+
+
 def test_tables_without_any_name_are_sites_of_their_own(tmp_path: Path) -> None:
     """A table without lot, wafer and site is one site; several such are named by sheet and do not mix."""
     rows: Rows = [["λ = 632.8 nm"], ["pol", "mode", "angle_deg"], ["TE", 0, 12.0]]
