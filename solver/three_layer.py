@@ -20,16 +20,20 @@ from numpy.typing import NDArray
 
 from .layers import SMALLEST_WAVE_NUMBER, Array, Layers, flatten
 
-_BLOCK = 8192
+_BLOCK = 16384
 _THREADS = 2
 _COARSE_STEPS = 2
-_EXTRA_STEPS = 2
 _STEPS = 80
-# What a third-order step leaves, in radians of phi, when it counts as converged.
+# What a step leaves, in radians of phi, when it counts as converged.
 _DONE = 1e-16
+# The same after the bent Newton step; N feels a tenth of it, and N's own rounding is 2e-16.
+_FREE = 1e-15
 _TINY = 1e-30
 _OPEN = -1.0  # marks a mode that needs more steps
 _HALF_PI = np.pi / 2
+_PI32 = np.float32(np.pi)
+# Share of the phase that single precision cannot tell from zero, with room to spare.
+_CLOSE = 1e-4
 
 
 Real = NDArray[np.floating[Any]]  # double, or single for the coarse steps
@@ -81,7 +85,7 @@ def three_layer_index(
 
 def solve_layers(layers: Layers, order: Array, finish: bool = True) -> Array:
     """Effective index of one block (B), NaN where it is not guided; `_OPEN` where unsettled, if not to be finished."""
-    with np.errstate(invalid="ignore", divide="ignore"):
+    with np.errstate(invalid="ignore", over="ignore", divide="ignore"):
         s = _wave_number(_edge(layers, order), order, finish)
         N = np.sqrt((layers.a[1] - layers.w[1] * s * s) / layers.b[1])
     return np.asarray(N) if finish else np.where(s == _OPEN, _OPEN, N)
@@ -93,7 +97,7 @@ def _isotropic(n: Array, t_um: Array, wavelength_um: Array, tm: Array, order: Ar
     square = np.ascontiguousarray(n.T)
     square = square * square
     film, high, low = square[1], np.maximum(square[0], square[2]), np.minimum(square[0], square[2])
-    with np.errstate(invalid="ignore"):
+    with np.errstate(invalid="ignore", over="ignore", divide="ignore"):
         dl, do = (np.where(tm, (film / x) ** 2, 1.0) for x in (high, low))
         gap = film - high
         tau = t_um * (2 * np.pi / wavelength_um)
@@ -105,29 +109,61 @@ def _isotropic(n: Array, t_um: Array, wavelength_um: Array, tm: Array, order: Ar
 
 def _wave_number(edge: _Edge, order: Array, finish: bool) -> Array:
     """s of each mode, NaN where it is not guided."""
-    # At cut-off the limiting half-space adds nothing to the phase.
-    other = np.sqrt(np.maximum(edge.bo - edge.do * edge.top * edge.top, 0.0))
-    excess = edge.top * edge.tau - edge.mpi - np.arctan(other / edge.top)
+    coarse = _Edge(*(y.astype(np.float32) for y in edge))
+    excess = _excess(coarse)
+    close = np.abs(excess) < _CLOSE * (1 + np.abs(coarse.mpi))
+    if close.any():  # at cut-off single precision cannot say whether the mode is there
+        rows = np.flatnonzero(close)
+        excess[rows] = np.where(_excess(edge.take(rows)) > 0, np.maximum(excess[rows], 1e-30), -1.0)
     guided = (excess > 0) & (order >= 0)
     if guided.all():
-        return _settled(edge, excess, finish)
+        return _settled(edge, coarse, excess, finish)
     s = np.full(order.size, np.nan)
     rows = np.flatnonzero(guided)
     if rows.size:
-        s[rows] = _settled(edge.take(rows), excess[rows], finish)
+        s[rows] = _settled(edge.take(rows), coarse.take(rows), excess[rows], finish)
     return s
 
 
-def _settled(edge: _Edge, excess: Array, finish: bool) -> Array:
-    s, settled = _solve(edge, excess, _EXTRA_STEPS if finish else 0)
-    if settled.all():
+def _excess(e: _Edge) -> Real:
+    """F at cut-off, where the limiting half-space adds nothing to the phase."""
+    other = np.sqrt(np.maximum(e.bo - e.do * e.top * e.top, 0))
+    return np.asarray(e.top * e.tau - e.mpi - np.arctan(other / e.top))
+
+
+def _settled(edge: _Edge, coarse: _Edge, excess: Real, finish: bool) -> Array:
+    sin, open_ = _free_steps(edge, coarse, excess)
+    s = edge.top * sin
+    if not open_.any():
         return s
     if not finish:
-        return np.where(settled, s, _OPEN)
-    rest = np.flatnonzero(~settled)
+        return np.where(open_, _OPEN, s)
+    rest = np.flatnonzero(open_)
     few = edge.take(rest)
-    s[rest] = few.top * _bracketed(few)
+    # At cut-off the coarse steps can overflow: any start will do for the brackets then.
+    start = np.clip(np.where(np.isfinite(sin[rest]), sin[rest], 0.7), 1e-12, 1 - 1e-12)
+    s[rest] = few.top * _finished(few, start)
     return s
+
+
+def _finished(e: _Edge, sin: Real) -> Array:
+    """Two full steps for modes that the free steps have left open, brackets for those that stay so."""
+    cos: Real = np.sqrt((1 - sin) * (1 + sin))
+    left: Real = np.ones_like(sin)
+    for _ in range(2):
+        newton, bend = _newton(sin, cos, e, bent=True)
+        step = np.minimum(np.maximum(newton / np.maximum(1 - newton * bend, 0.3), -0.7 * cos), 0.7 * sin)
+        left = _left(step, newton * bend)
+        sin, cos = _turn(sin, cos, step)
+    rest = np.flatnonzero(~(left <= _DONE))
+    if rest.size:
+        sin[rest] = _bracketed(e.take(rest), np.arcsin(np.clip(sin[rest], 1e-12, 1.0)))
+    return np.asarray(sin, dtype=float)
+
+
+def _left(step: Real, half: Real) -> Real:
+    """What a Halley step leaves, estimated from its size and its curvature term."""
+    return np.asarray(np.abs(step) * (np.abs(step) + 2 * np.abs(half)) ** 2)
 
 
 def _edge(layers: Layers, order: Array) -> _Edge:
@@ -148,49 +184,38 @@ def _half_space(layers: Layers, over: Array, i: int) -> tuple[Array, Array]:
     return scale * (a[1] * share - a[i] / w[i]), scale * w[1] * share
 
 
-def _solve(e: _Edge, excess: Array, extra: int) -> tuple[Array, NDArray[np.bool_]]:
-    """s of the mode after a fixed number of free steps, and whether they were enough.
+def _free_steps(e: _Edge, coarse: _Edge, excess: Real) -> tuple[Array, NDArray[np.bool_]]:
+    """sin(phi) of the mode, and where the steps were not enough.
 
-    Two steps in single precision come within its rounding at half the cost, one in double precision does the rest.
+    Two Halley steps in single precision come within its rounding at less than half the cost. A Newton step in double
+    precision, bent by the curvature that the last of them found, does the rest.
     """
     # F runs from -(m + 1) pi at phi = 0 to `excess` at cut-off, as a sine where the film is thick, as phi where it is
     # thin.
-    x = (e.mpi + np.pi) / (excess + e.mpi + np.pi)
-    strong = e.top * e.tau
+    x = (coarse.mpi + _PI32) / (excess + coarse.mpi + _PI32)
+    strong = coarse.top * coarse.tau
     x2 = x * x
-    sine = x * (1.5707963 + x2 * (-0.6459641 + x2 * (0.0796926 - 0.0045248 * x2)))
-    sin = np.minimum((strong * x + 1.5708 * sine) / (strong + 1.5708), 1 - 1e-6)
-    coarse = _Edge(*(y.astype(np.float32) for y in e))
-    sin32: Real = sin.astype(np.float32)
+    sine = x * (np.float32(1.5707963) + x2 * (np.float32(-0.6459641) + x2 * np.float32(0.0751678)))
+    sin32: Real = np.minimum((strong * x + _PI32 / 2 * sine) / (strong + _PI32 / 2), np.float32(1 - 1e-6))
     cos32: Real = np.sqrt((1 - sin32) * (1 + sin32))
+    step: Real = x
+    bend: Real = x
     for _ in range(_COARSE_STEPS):
-        _, step, _, _ = _halley(sin32, cos32, coarse)
-        sin32, cos32 = _turn(sin32, cos32, np.minimum(np.maximum(step, -0.7 * cos32), 0.7 * sin32))
-    sin, cos = sin32.astype(float), cos32.astype(float)
-    # back onto the circle, which single precision only meets to its rounding
-    size = 1 / np.sqrt(sin * sin + cos * cos)
-    sin, cos = sin * size, cos * size
-    _, step, half, first = _halley(sin, cos, e)
-    sin, cos = _turn(sin, cos, np.minimum(np.maximum(step, -0.7 * cos), 0.7 * sin))
-    settled = _left(first, half) <= _DONE
-    if extra and not settled.all():
-        rest = np.flatnonzero(~settled)
-        few = e.take(rest)
-        for _ in range(extra):
-            _, step, half, first = _halley(sin[rest], cos[rest], few)
-            step = np.minimum(np.maximum(step, -0.7 * cos[rest]), 0.7 * sin[rest])
-            sin[rest], cos[rest] = _turn(sin[rest], cos[rest], step)
-        settled[rest] = _left(first, half) <= _DONE
-    return e.top * sin, settled
+        newton, bend = _newton(sin32, cos32, coarse, bent=True)
+        step = newton / np.maximum(1 - newton * bend, np.float32(0.3))
+        step = np.minimum(np.maximum(step, np.float32(-0.7) * cos32), np.float32(0.7) * sin32)
+        sin32, cos32 = _turn(sin32, cos32, step)
+    sin: Real = sin32.astype(float)
+    cos: Real = np.sqrt((1 - sin) * (1 + sin))
+    newton, _ = _newton(sin, cos, e, bent=False)
+    last = newton * (1 + newton * bend)
+    # The curvature was taken one single-precision step away: that share of the bent term is what is left.
+    left = newton * newton * (1 + np.abs(bend)) * (4 * np.abs(step) + np.float32(1e-3))
+    return np.asarray(sin - last * (cos + 0.5 * last * sin), dtype=float), ~(left < _FREE)
 
 
-def _left(step: Real, half: Real) -> Real:
-    """What a Halley step leaves, estimated from its size and its curvature term."""
-    return np.asarray(np.abs(step) * (np.abs(step) + 2 * np.abs(half)) ** 2)
-
-
-def _halley(sin: Real, cos: Real, e: _Edge) -> tuple[Real, Real, Real, Real]:
-    """F, the step to take off phi, its curvature term, and the step once more before any limit."""
+def _newton(sin: Real, cos: Real, e: _Edge, *, bent: bool) -> tuple[Real, Real]:
+    """Newton's step to take off phi, and F'' / (2 F') where asked for (else zero)."""
     s = e.top * sin
     s2 = s * s
     across = e.top * cos
@@ -205,34 +230,37 @@ def _halley(sin: Real, cos: Real, e: _Edge) -> tuple[Real, Real, Real, Real]:
     u = e.bo / (ro * vo)
     inner = e.tau + u
     slope = across * inner + k
+    if not bent:
+        return f / slope, np.zeros(())
     bend = across * across * s * u * (e.do / ro2 - 2 * (1 - e.do) / vo) - s * (inner + 2 * k * across * (1 - e.dl) / vl)
-    newton = f / slope
-    half = 0.5 * newton * bend / slope
-    step = newton / np.maximum(1 - half, 0.3)
-    return f, step, half, step
+    half = 1 / (2 * slope)
+    return 2 * f * half, bend * half
 
 
 def _turn(sin: Real, cos: Real, step: Real) -> tuple[Real, Real]:
     """phi less `step`, to third order in the step and exactly on the circle, without a trigonometric call."""
-    h = 0.5 * step
+    h = step / 2
     over = 1 / (1 + h * h)
     c, s = (1 - h * h) * over, 2 * h * over
     return sin * c - cos * s, cos * c + sin * s
 
 
-def _bracketed(e: _Edge) -> Array:
+def _bracketed(e: _Edge, phi: Array) -> Array:
     """sin(phi) by bracketed steps in phi, for modes that the free steps have not settled."""
-    phi = np.full(e.top.size, np.pi / 4)
     lo, hi = np.zeros_like(phi), np.full_like(phi, np.pi / 2)
     out = np.empty_like(phi)
     index = np.arange(phi.size)
     for _ in range(_STEPS):
-        f, step, half, _ = _halley(np.sin(phi), np.cos(phi), e)
-        hi, lo = np.where(f > 0, phi, hi), np.where(f > 0, lo, phi)
+        newton, bend = _newton(np.sin(phi), np.cos(phi), e, bent=True)
+        half = newton * bend
+        step = newton / np.maximum(1 - half, 0.3)
+        hi, lo = np.where(newton > 0, phi, hi), np.where(newton > 0, lo, phi)
         new = phi - step
         bad = (new <= lo) | (new >= hi)
         new = np.where(bad, 0.5 * (lo + hi), new)
-        done = ((_left(step, half) <= _DONE) & ~bad) | (hi - lo <= 4e-16)
+        still = np.abs(step) <= 4e-16  # below the rounding of phi; F rises everywhere, so this is the root
+        new = np.where(still, phi, new)
+        done = ((_left(step, half) <= _DONE) & ~bad) | still | (hi - lo <= 4.5e-16)
         out[index[done]] = np.sin(new[done])
         keep = ~done
         if not keep.any():
