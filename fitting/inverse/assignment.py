@@ -68,7 +68,8 @@ def rank(layout: Layout, data: FilmReadings, label: IntArray, prior: Prior) -> l
         again, _score = cand.assign(sc, theta)
         if np.array_equal(again, orders):
             break
-        orders, theta = _distinct(again, theta)
+        # A gross error can drag the shared unknowns so far that the closed form, which holds them, loses good readings.
+        orders, theta = _distinct(np.concatenate([orders, again]), np.concatenate([theta, theta]))
     orders, theta = _cut_far(layout, data, orders, theta, prior)
     orders, fit = _drop_strays(layout, data, orders, theta, prior)
     back = _take_back(sc, data, orders, fit)
