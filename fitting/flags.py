@@ -9,8 +9,8 @@ from .records import Flag
 
 FLAGS: dict[str, str] = {
     "no_readings": "The site has no usable reading. Measure it again, or take it off the sheet.",
-    "no_mode_possible": "No film inside the fit windows explains most of these readings. Check prism index, base angle, "
-    "angle sign and units, or widen the windows in the stack file.",
+    "no_mode_possible": "No film inside the fit windows explains most of these readings. Check prism index, base "
+    "angle, angle sign and units, or widen the windows in the stack file.",
     "prism_below_film": "The prism index does not exceed the film's: the lowest modes cannot be coupled. Use a prism "
     "of higher index, or narrow the film's index window if it is known to be lower.",
     "loose_direction": "The readings leave a combination of the unknowns undetermined.",
