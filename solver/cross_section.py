@@ -115,7 +115,8 @@ def cross_section(
         np.broadcast_to(n_, (*shape, n_.shape[-1])),
         np.broadcast_to(t, (*shape, t.shape[-1])),
         core,
-        *(np.broadcast_to(x, shape) for x in (width, lam)),
+        np.broadcast_to(width, shape),
+        np.broadcast_to(lam, shape),
         None if etch is None else np.broadcast_to(etch, shape),
         np.broadcast_to(wall, shape),
     )
