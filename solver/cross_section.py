@@ -40,6 +40,8 @@ class GuideFlag(IntFlag):
     BEND_RADIATES = 64  # the bend loses light outwards
     BEND_OUT_OF_RANGE = 128  # the bend is too tight for the map
     NEAR_CUT_OFF = 256  # the mode is so weakly bound that a small change loses it
+    OUTSIDE_MAP = 512  # beyond the window of the correction map, which is carried on straight there
+    MAP_GOAL_MISSED = 1024  # the correction map stopped short of its goal; its stated error says by how much
 
 
 @dataclass(frozen=True, slots=True)

@@ -34,7 +34,7 @@ class MeshRule:
     corner: side of a triangle at a corner over the largest one; grading: power of the distance that sides follow;
     absorber: thickness of the absorbing layer inside the walls, in the same lengths, 0 for a closed box."""
 
-    step: float = 0.6
+    step: float = 0.8
     growth: float = 1.5
     reach: float = 9.0
     corner: float = 1e-3
@@ -186,6 +186,8 @@ def _vertical_lines(
     rule: MeshRule,
 ) -> Array:
     marks, pieces = frame.marks, []
+    # Beside the core the field is more crooked than its decay far out would have it.
+    beside_core = rule.step * float(lengths[section.core])
     for k, layer in enumerate(layer_of):
         low, high = float(marks[k]), float(marks[k + 1])
         size = rule.step * float(lengths[layer])
@@ -195,7 +197,7 @@ def _vertical_lines(
         elif float(section.n[layer]) > N:
             piece = np.linspace(low, high, max(1, int(np.ceil((high - low) / size))) + 1)
         else:
-            piece = low + _spread(high - low, size, rule.growth)
+            piece = low + _spread(high - low, min(size, beside_core), rule.growth)
             if layer < section.core:
                 piece = high + low - piece[::-1]
         pieces.append(piece[:-1])
