@@ -1,0 +1,459 @@
+"""One slab at a time, in plain floats: for a handful of stacks numpy's overhead per call costs more than the sums.
+
+The same mode condition as in `phase` and the same integrals as in `fields`, which hold the derivation; here with the
+unknown phi in q = low + (high - low) cos^2 phi, low the cut-off and high the ceiling of q = N^2. In phi the phase is
+smooth from cut-off to ceiling.
+"""
+
+from __future__ import annotations
+
+from math import asin, atan2, ceil, cos, exp, inf, log, nan, pi, sin, sinh, sqrt
+from typing import NamedTuple
+
+from .layers import SMALLEST_WAVE_NUMBER
+
+_STEPS = 120
+_ROUNDING = 9e-16  # as in `slab`
+_NO_DECAY = 1e-30  # as in `phase`
+_TINY = 1e-300
+_THICK = 1.0  # as in `fields`
+_STEEP = pi / 2 - 1e-6  # nearer to cut-off phi is finer than the rounding of q
+
+
+class SlabMode(NamedTuple):
+    """Effective index of one mode and its derivatives, all NaN where it is not guided: N; dn, a list of L; dt_per_um, a
+    list of L-2; dwavelength_per_um at fixed indices; dn_normal, a list of L, zero where layers are isotropic."""
+
+    N: float
+    dn: list[float]
+    dt_per_um: list[float]
+    dwavelength_per_um: float
+    dn_normal: list[float]
+
+
+class _Stack(NamedTuple):
+    """Coefficients as in `layers`: w, a, b of all layers, tau of the films."""
+
+    w: list[float]
+    a: list[float]
+    b: list[float]
+    tau: list[float]
+
+
+class _Integrals(NamedTuple):
+    """Of a mode's field: integrals of psi^2 and w psi'^2 over all layers, h of the films, psi^2 at the two ends."""
+
+    psi2: list[float]
+    wpsi1: list[float]
+    h: list[float]
+    ends: tuple[float, float]
+
+
+class _Edge(NamedTuple):
+    """Where a sweep enters a film: angle, integral of b psi^2 so far over R^2, log R^2."""
+
+    theta: float
+    wron: float
+    log_r2: float
+
+
+def slab_mode(
+    n: list[float], t_um: list[float], wavelength_um: float, order: int, tm: bool, n_normal: list[float] | None = None
+) -> SlabMode:
+    """Mode `order` of one stack with its derivatives; arguments and accuracy as for `slab.mode_index`, unchecked.
+
+    n: L indices from the substrate up; t_um: L-2 thicknesses, zero allowed; n_normal: indices along the normal where
+    layers are uniaxial (TM).
+    """
+    stack = _coefficients(n, t_um, wavelength_um, tm, n_normal)
+    first, last = _core(stack)
+    q = _root(_trimmed(stack, first, last), order) if first <= last else nan
+    if q != q:
+        return SlabMode(nan, [nan] * len(n), [nan] * len(t_um), nan, [nan] * len(n))
+    field = _whole_field(stack, q, first, last)
+    return _derivatives(stack, q, field, n, n_normal, wavelength_um, tm)
+
+
+def slab_phase(
+    n: list[float], t_um: list[float], wavelength_um: float, tm: bool, N: float, n_normal: list[float] | None = None
+) -> float:
+    """Phase over pi, less one, at an effective index N: as many modes lie above N as there are whole numbers from zero
+    up to below it. At or below cut-off N is taken as cut-off."""
+    stack = _coefficients(n, t_um, wavelength_um, tm, n_normal)
+    first, last = _core(stack)
+    if first > last:
+        return -1.0
+    stack = _trimmed(stack, first, last)
+    low, high = _range(stack)
+    q = N * N
+    if q >= high or low >= high:
+        return -1.0
+    return _total_phase(stack, max(q, low), q <= low)[0] / pi - 1
+
+
+def slab_count(
+    n: list[float], t_um: list[float], wavelength_um: float, tm: bool, n_normal: list[float] | None = None
+) -> int:
+    """Number of guided modes of one stack; arguments as for `slab_mode`."""
+    return max(ceil(slab_phase(n, t_um, wavelength_um, tm, 0.0, n_normal)), 0)
+
+
+def _coefficients(
+    n: list[float], t_um: list[float], wavelength_um: float, tm: bool, n_normal: list[float] | None
+) -> _Stack:
+    k0 = 2 * pi / wavelength_um
+    tau = [k0 * t for t in t_um]
+    if not tm:
+        return _Stack([1.0] * len(n), [x * x for x in n], [1.0] * len(n), tau)
+    w = [1 / (x * x) for x in n]
+    return _Stack(w, [1.0] * len(n), w if n_normal is None else [1 / (x * x) for x in n_normal], tau)
+
+
+def _core(stack: _Stack) -> tuple[int, int]:
+    """First and last film that differ from the half-space on their side; those beyond have its index or no thickness.
+    The first exceeds the last where there is none."""
+    w, a, b, tau = stack
+    first, last = 1, len(tau)
+    while first <= last and (tau[first - 1] == 0 or (w[first], a[first], b[first]) == (w[0], a[0], b[0])):
+        first += 1
+    while first <= last and (tau[last - 1] == 0 or (w[last], a[last], b[last]) == (w[-1], a[-1], b[-1])):
+        last -= 1
+    return first, last
+
+
+def _trimmed(stack: _Stack, first: int, last: int) -> _Stack:
+    """The stack without the films that `_core` leaves out."""
+    w, a, b, tau = stack
+    if first == 1 and last == len(tau):
+        return stack
+    w, a, b = ([x[0], *x[first : last + 1], x[-1]] for x in (w, a, b))
+    return _Stack(w, a, b, tau[first - 1 : last])
+
+
+def _range(s: _Stack) -> tuple[float, float]:
+    """Cut-off and ceiling of q; films without thickness carry nothing."""
+    a, b = s.a, s.b
+    low = max(a[0] / b[0], a[-1] / b[-1])
+    high = max((a[j + 1] / b[j + 1] for j, tau in enumerate(s.tau) if tau > 0), default=-inf)
+    return low, high
+
+
+def _wave_numbers(stack: _Stack, q: float) -> tuple[list[float], list[bool]]:
+    s, osc = [], []
+    for w, a, b in zip(stack.w, stack.a, stack.b):
+        g = (a - q * b) / w
+        s.append(max(sqrt(abs(g)), SMALLEST_WAVE_NUMBER))
+        osc.append(g > 0)
+    return s, osc
+
+
+def _sweep(stack: _Stack, s: list[float], osc: list[bool], *, upward: bool) -> list[_Edge]:
+    """Shoot from one half-space over all films: what `phase.sweep` does."""
+    films = len(stack.tau)
+    order = range(1, films + 1) if upward else range(films, 0, -1)
+    start, ahead = (0, 1) if upward else (films + 1, -1)
+    gamma = [w * x for w, x in zip(stack.w, s)]
+    first = order[0]
+    theta = atan2(gamma[first], gamma[start])
+    r2 = gamma[first] ** 2 + gamma[start] ** 2
+    wron = stack.b[start] / (2 * s[start]) / r2
+    log_r2 = log(r2)
+    out = [_Edge(0.0, 0.0, 0.0)] * films
+    for j in order:
+        out[j - 1] = _Edge(theta, wron, log_r2)
+        if j == order[-1]:
+            break
+        tau = stack.tau[j - 1]
+        end, r2, integral, decay = _across(theta, s[j], tau, osc[j])
+        wron = (wron * decay + stack.b[j] * integral / gamma[j] ** 2) / r2
+        ratio = gamma[j + ahead] / gamma[j]
+        sn, cs = sin(end), cos(end)
+        theta = end + atan2((ratio - 1) * sn * cs, cs * cs + ratio * sn * sn)
+        stretch = (ratio * sn) ** 2 + cs * cs
+        wron /= stretch
+        log_r2 += log(r2 * stretch) - log(max(decay, _TINY))
+    return out
+
+
+def _across(theta: float, s: float, tau: float, oscillates: bool) -> tuple[float, float, float, float]:
+    """Cross a film: new angle, growth of R^2 and integral of (gamma psi)^2, both times the last number, the decay."""
+    if tau == 0:
+        return theta, 1.0, 0.0, 1.0
+    if oscillates:
+        end = theta + s * tau
+        return end, 1.0, tau / 2 - (sin(2 * end) - sin(2 * theta)) / (4 * s), 1.0
+    sn, cs = sin(theta), cos(theta)
+    grow, fall = (sn + cs) / 2, (sn - cs) / 2
+    decay = exp(-2 * s * tau)
+    end = theta + atan2((cs - sn) * (cs + sn) * (1 - decay), (sn + cs) ** 2 + decay * (cs - sn) ** 2)
+    r2 = max(2 * (grow**2 + (fall * decay) ** 2), _TINY)
+    integral = (grow**2 + fall**2 * decay) * (1 - decay) / (2 * s) + 2 * grow * fall * tau * decay
+    return end, r2, max(integral, 0.0), decay
+
+
+def _total_phase(stack: _Stack, q: float, at_cut_off: bool = False) -> tuple[float, float, int]:
+    """Phase in the flattest oscillating film, its slope in q, and which film that is: `phase.total_phase`."""
+    s, osc = _wave_numbers(stack, q)
+    if at_cut_off:
+        for i in (0, -1):
+            if stack.a[i] / stack.b[i] >= q:
+                s[i] = _NO_DECAY
+    up, down = _sweep(stack, s, osc, upward=True), _sweep(stack, s, osc, upward=False)
+    best, phase, least = -1, 0.0, inf
+    for j, tau in enumerate(stack.tau):
+        if not osc[j + 1] or tau == 0:
+            continue
+        w, b, sj = stack.w[j + 1], stack.b[j + 1], s[j + 1]
+        gamma = w * sj
+        one, two = up[j].theta, down[j].theta
+        slope = gamma * (up[j].wron + down[j].wron) + b / (2 * w * sj) * (
+            tau + (sin(2 * one) + sin(2 * two)) / (2 * sj)
+        )
+        if slope < least:
+            best, phase, least = j, one + sj * tau + two, slope
+    return phase, -max(least, _TINY), best
+
+
+def _root(stack: _Stack, order: int) -> float:
+    """q of mode `order`, NaN where it is not guided."""
+    low, high = _range(stack)
+    if not high > low or order < 0:
+        return nan
+    if len(stack.tau) == 1:
+        return _three_layer_root(stack, order, low, high)
+    phase = _total_phase(stack, low, True)[0]
+    if not phase / pi - 1 > order:
+        return nan
+    target, span = (order + 1) * pi, high - low
+    bottom, top = 0.0, pi / 2  # of phi: the phase rises with it
+    x = target / phase
+    strong = sqrt(span) * sum(stack.tau)
+    phi = asin(min((strong * x + pi / 2 * sin(pi / 2 * x)) / (strong + pi / 2), 1.0))
+    before, rise_before = inf, 0.0
+    for _ in range(_STEPS):
+        sn, cs = sin(phi), cos(phi)
+        q = min(low + span * cs * cs, high * (1 - 1e-15))
+        phase, slope, _best = _total_phase(stack, q)
+        miss = phase - target
+        if miss >= 0:
+            top = phi
+        if miss <= 0:
+            bottom = phi
+        rise = -slope * 2 * span * sn * cs
+        step = miss / rise if rise > 0 else inf
+        ends = low + span * cos(top) ** 2, low + span * cos(bottom) ** 2
+        # Steps that shrink by squares while the phase stays as steep: the next would be below rounding.
+        if abs(rise - rise_before) < 1e-2 * rise and abs(step) ** 3 < 1e-16 * before * before and phi < _STEEP:
+            return low + span * cos(phi - step) ** 2
+        if abs(miss) <= _ROUNDING * target or ends[1] - ends[0] <= 4 * _ROUNDING * q:
+            return min(max(q - miss / slope, ends[0]), ends[1])
+        # Half way between nearly degenerate modes Newton's step vanishes far from either: a step below rounding counts
+        # only once the far side of the root has been seen.
+        shortest = max(_ROUNDING * q / (span * max(sn * cs, 1e-9)), 2.5e-16 * phi)
+        if abs(step) < shortest:
+            step = shortest if step > 0 else -shortest
+        before, rise_before = step, rise
+        new = phi - step
+        phi = new if bottom <= new <= top and abs(step) <= (top - bottom) / 2 else (bottom + top) / 2
+    raise ArithmeticError(f"mode search did not converge for mode {order} of the stack {stack}")
+
+
+def _three_layer_root(stack: _Stack, order: int, low: float, high: float) -> float:
+    """The same for a single film, whose condition needs no sweep: see `three_layer`."""
+    w, a, b = stack.w, stack.a, stack.b
+    tau = stack.tau[0]
+    shares = []
+    for i in (0, 2):
+        # R^2 = p - d s^2 for a half-space, s the film's wave number
+        share = b[i] / (b[1] * w[i])
+        scale = (w[i] / w[1]) ** 2
+        shares.append((scale * (a[1] * share - a[i] / w[i]), scale * w[1] * share))
+    (bl, dl), (bo, do) = sorted(shares, key=lambda x: x[0] / x[1])
+    edge = sqrt(max(bl / dl, 0.0))
+    other = sqrt(max(bo - do * edge * edge, 0.0))
+    excess = edge * tau - order * pi - atan2(other, edge)
+    if not excess > 0:
+        return nan
+    root = sqrt(dl)
+    bottom, top = 0.0, pi / 2
+    x = (order + 1) * pi / (excess + (order + 1) * pi)
+    phi = pi / 2 * x if edge * tau < 4 else atan2(x, sqrt(1 - x * x)) if x < 1 else pi / 2
+    for _ in range(_STEPS):
+        sn, cs = sin(phi), cos(phi)
+        s, across = edge * sn, edge * cs
+        rl = root * across
+        ro2 = max(bo - do * s * s, 1e-30)
+        ro = sqrt(ro2)
+        f = s * tau - order * pi - atan2(rl, s) - atan2(ro, s)
+        vl, vo = s * s + rl * rl, s * s + ro2
+        k, u = bl / (root * vl), bo / (ro * vo)
+        slope = across * (tau + u) + k
+        bend = across * across * s * u * (do / ro2 - 2 * (1 - do) / vo) - s * (tau + u + 2 * k * across * (1 - dl) / vl)
+        newton = f / slope
+        half = newton * bend / (2 * slope)
+        step = newton / max(1 - half, 0.3)
+        if f > 0:
+            top = phi
+        else:
+            bottom = phi
+        new = phi - step
+        inside = bottom < new < top
+        if (inside and abs(step) * (abs(step) + 2 * abs(half)) ** 2 <= 1e-16) or abs(step) <= 4e-16:
+            phi = new if inside else phi
+            break
+        phi = new if inside else (bottom + top) / 2
+        if top - bottom <= 4.5e-16:
+            break
+    else:
+        raise ArithmeticError(f"three-layer mode search did not converge for mode {order} of the stack {stack}")
+    s = edge * sin(phi)
+    return (a[1] - w[1] * s * s) / b[1]
+
+
+def _derivatives(
+    stack: _Stack,
+    q: float,
+    field: _Integrals,
+    n: list[float],
+    n_normal: list[float] | None,
+    wavelength_um: float,
+    tm: bool,
+) -> SlabMode:
+    """The variation theorem of `fields`."""
+    N = sqrt(q)
+    psi2, wpsi1, h, _ends = field
+    total = 2 * N * sum(x * y for x, y in zip(stack.b, psi2))
+    if tm:
+        dn = [2 * y / (x * total) for x, y in zip(n, wpsi1)]
+        normal = n if n_normal is None else n_normal
+        dn_normal = [2 * q * x / (y * y * y * total) for x, y in zip(psi2, normal)]
+        if n_normal is None:
+            dn, dn_normal = [x + y for x, y in zip(dn, dn_normal)], [0.0] * len(n)
+    else:
+        dn, dn_normal = [2 * x * y / total for x, y in zip(n, psi2)], [0.0] * len(n)
+    k0 = 2 * pi / wavelength_um
+    dwavelength = -2 * sum(wpsi1) / (total * wavelength_um)
+    return SlabMode(N, dn, [x / total * k0 for x in h], dwavelength, dn_normal)
+
+
+def _whole_field(stack: _Stack, q: float, first: int, last: int) -> _Integrals:
+    """The field of the trimmed stack, and the layers left out filled in: there it falls as in the half-space."""
+    core = _trimmed(stack, first, last)
+    psi2, wpsi1, h, ends = (_film_field if first == last else _field)(core, q)
+    films = len(stack.tau)
+    if last - first == films - 1:
+        return _Integrals(psi2, wpsi1, h, ends)
+    low = _tail(stack, q, 0, range(first - 1, 0, -1), ends[0])
+    high = _tail(stack, q, films + 1, range(last + 1, films + 1), ends[1])
+    return _Integrals(
+        low[0][::-1] + psi2[1:-1] + high[0],
+        low[1][::-1] + wpsi1[1:-1] + high[1],
+        low[2][::-1] + h + high[2],
+        ends,
+    )
+
+
+def _tail(
+    stack: _Stack, q: float, end: int, films: range, psi_squared: float
+) -> tuple[list[float], list[float], list[float]]:
+    """Integrals of psi^2 and w psi'^2 and h outwards over the films left out on one side, the half-space `end` last."""
+    w, b = stack.w[end], stack.b[end]
+    s = max(sqrt(abs((stack.a[end] - q * b) / w)), SMALLEST_WAVE_NUMBER)
+    v_squared = (w * s) ** 2 * psi_squared
+    psi2, wpsi1, h = [], [], []
+    here = 1.0
+    for j in films:
+        there = here * exp(-2 * s * stack.tau[j - 1])
+        psi2.append(psi_squared * (here - there) / (2 * s))
+        wpsi1.append(w * s * s * psi2[-1])
+        h.append((v_squared / stack.w[j] + (stack.a[j] - q * stack.b[j]) * psi_squared) * here)
+        here = there
+    psi2.append(psi_squared * here / (2 * s))
+    wpsi1.append(w * s * s * psi2[-1])
+    return psi2, wpsi1, h
+
+
+def _film_field(stack: _Stack, q: float) -> _Integrals:
+    """The field of three layers, in the film a sine of amplitude 1."""
+    w, a, b, tau = stack
+    gap = a[1] - q * b[1]
+    s = [max(sqrt(abs(x - q * y) / z), SMALLEST_WAVE_NUMBER) for x, y, z in zip(a, b, w)]
+    g0, g1, g2 = (x * y for x, y in zip(w, s))
+    rest0, rest2 = 1 / (g1 * g1 + g0 * g0), 1 / (g1 * g1 + g2 * g2)
+    bow, height = g0 * rest0 + g2 * rest2, 1 / w[1]
+    psi2 = [rest0 / (2 * s[0]), (tau[0] * height + bow) / (2 * gap), rest2 / (2 * s[2])]
+    wpsi1 = [g0 * rest0 / 2, (tau[0] * height - bow) / 2, g2 * rest2 / 2]
+    return _Integrals(psi2, wpsi1, [height], (rest0, rest2))
+
+
+def _field(stack: _Stack, q: float) -> _Integrals:
+    """The field of any stack, the two sweeps joined in the film where the phase is flattest."""
+    w, a, b, tau = stack
+    s, osc = _wave_numbers(stack, q)
+    up, down = _sweep(stack, s, osc, upward=True), _sweep(stack, s, osc, upward=False)
+    gamma = [x * y for x, y in zip(w, s)]
+    films = len(tau)
+    slopes = [
+        gamma[j + 1] * (up[j].wron + down[j].wron) + tau[j] * b[j + 1] / (2 * gamma[j + 1])
+        if osc[j + 1] and tau[j] > 0
+        else inf
+        for j in range(films)
+    ]
+    m = slopes.index(min(slopes))
+    end = up[m].theta + s[m + 1] * tau[m]
+    sign = -1.0 if cos(end + down[m].theta) > 0 else 1.0
+    psi_l, v_l, psi_h, v_h = ([0.0] * films for _ in range(4))
+    for j in range(films):
+        if j <= m:
+            scale = exp((up[j].log_r2 - up[m].log_r2) / 2)
+            psi_l[j], v_l[j] = sin(up[j].theta) * scale / gamma[j + 1], cos(up[j].theta) * scale
+        if j > m:
+            scale = exp((down[j].log_r2 - down[m].log_r2) / 2) * sign
+            psi_h[j], v_h[j] = sin(down[j].theta) * scale / gamma[j + 1], -cos(down[j].theta) * scale
+    psi_h[:m], v_h[:m] = psi_l[1 : m + 1], v_l[1 : m + 1]
+    psi_l[m + 1 :], v_l[m + 1 :] = psi_h[m:-1], v_h[m:-1]
+    sn, cs = sin(s[m + 1] * tau[m]), cos(s[m + 1] * tau[m])
+    psi_h[m] = psi_l[m] * cs + v_l[m] / gamma[m + 1] * sn
+    v_h[m] = v_l[m] * cs - psi_l[m] * gamma[m + 1] * sn
+    if m + 1 < films:
+        psi_l[m + 1], v_l[m + 1] = psi_h[m], v_h[m]
+    psi2 = [psi_l[0] ** 2 / (2 * s[0])]
+    wpsi1 = [gamma[0] * psi_l[0] ** 2 / 2]
+    h = []
+    for j in range(films):
+        one, two = _integrals(w[j + 1], s[j + 1], osc[j + 1], tau[j], psi_l[j], v_l[j], psi_h[j])
+        psi2.append(one)
+        wpsi1.append(two)
+        psi, v = (psi_l[j], v_l[j]) if abs(psi_l[j]) <= abs(psi_h[j]) else (psi_h[j], v_h[j])
+        h.append(v * v / w[j + 1] + (a[j + 1] - q * b[j + 1]) * psi * psi)
+    psi2.append(psi_h[-1] ** 2 / (2 * s[-1]))
+    wpsi1.append(gamma[-1] * psi_h[-1] ** 2 / 2)
+    return _Integrals(psi2, wpsi1, h, (psi_l[0] ** 2, psi_h[-1] ** 2))
+
+
+def _integrals(
+    w: float, s: float, oscillates: bool, tau: float, psi: float, v: float, far: float
+) -> tuple[float, float]:
+    """Integrals of psi^2 and w psi'^2 over one film: `fields`."""
+    if tau == 0:
+        return 0.0, 0.0
+    x = s * tau
+    if not oscillates and x > _THICK:
+        e = exp(-x)
+        share = 1 - e * e
+        grow, fall = (far - psi * e) / share, (psi - far * e) / share
+        square, cross = (grow**2 + fall**2) * share / (2 * s), 2 * grow * fall * tau * e
+        return square + cross, w * s * s * (square - cross)
+    sign = 1.0 if oscillates else -1.0
+    g, z = sign * s * s, sign * x * x
+    wave = sin if oscillates else sinh
+    sigma = wave(x) / x if x > 1e-150 else 1.0
+    if abs(z) < 0.02:
+        rest = 1 / 3 - z / 15 * (1 - 2 * z / 21 * (1 - z / 18 * (1 - 2 * z / 55 * (1 - z / 39))))
+    else:
+        rest = (1 - wave(2 * x) / (2 * x)) / (2 * z)
+    cc, cs, ss = tau * (1 - z * rest), (tau * sigma) ** 2 / 2, tau**3 * rest
+    slope = v / w
+    psi2 = psi * psi * cc + 2 * psi * slope * cs + slope * slope * ss
+    wpsi1 = w * (slope * slope * cc - 2 * g * psi * slope * cs + (g * psi) ** 2 * ss)
+    return psi2, wpsi1
