@@ -4,11 +4,11 @@
     corrected_modes(section, a_map)       effective index method plus map: value, all derivatives, stated error
 
 The difference and its slopes along the window's axes are fitted by Chebyshev polynomials of total degree; the degree is
-raised until held-back nodes are met to the goal or the cap is reached. The slopes with respect to everything else (other
+raised until held-back nodes are met to the goal or the cap is reached. Slopes with respect to everything else (other
 indices, other thicknesses, fixed axes) are fitted too, to first order about their nominal values. All slopes come from
 the same solve as the value, see `vector_modes`.
 
-The stated error: the largest miss at the held-back nodes, and what mesh and box leave in the reference, as standard
+The stated error: the largest miss at the held-back nodes and what mesh and box leave in the reference, as standard
 uncertainties added in squares.
 """
 

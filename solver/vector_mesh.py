@@ -114,14 +114,26 @@ def interface_levels(section: CrossSection) -> Array:
     return np.insert(heights, core, heights[core] - float(section.depth_um))
 
 
-def lay_out(section: CrossSection, N: float, N_side: float, rule: MeshRule, *, whole: bool = False) -> GuideMesh:
+def lay_out(
+    section: CrossSection,
+    N: float,
+    N_side: float,
+    rule: MeshRule,
+    *,
+    whole: bool = False,
+    side_limit_um: float = np.inf,
+) -> GuideMesh:
     """A mesh for a cross-section with empty batch shape. N: expected effective index; N_side: the largest index that
-    light beside the guide can have, of a slab or of a material."""
+    light beside the guide can have, of a slab or of a material; whole: both halves of the guide; side_limit_um: the
+    box ends no further than this beside the guide."""
     levels = interface_levels(section)
     layer_of = _layer_of_segment(section)
     lengths = np.array([decay_length_um(float(x), N, float(section.wavelength_um)) for x in section.n])
     lateral = decay_length_um(N_side, N, float(section.wavelength_um))
-    frame = _frame(section, levels, (lateral, float(lengths[0]), float(lengths[-1])), N_side > N, N, rule, whole)
+    ends = (lateral, float(lengths[0]), float(lengths[-1]))
+    frame = _frame(section, levels, ends, N_side > N, N, rule, whole)
+    if side_limit_um < frame.margins[0]:
+        frame = replace(frame, margins=(side_limit_um, *frame.margins[1:]))
     size = rule.step * float(lengths[section.core])
     y_lines = _vertical_lines(section, levels, layer_of, lengths, N, frame, rule)
     x_lines = _lateral_lines(frame, size, min(lateral, float(min(lengths[0], lengths[-1]))), rule)

@@ -22,7 +22,7 @@ import numpy as np
 from .cross_section import CrossSection, GuideFlag, GuideModes, without_substrate
 from .layers import Array
 from .slab import mode_index
-from .vector_bend import bent, stretched
+from .vector_bend import bent, mapped_index, stretched
 from .vector_forms import (
     Complex,
     Field,
@@ -43,7 +43,7 @@ from .vector_pick import Likeness, likeness, trial_field
 FINE = MeshRule()
 PRECISE = FINE.finer(1.6)
 COARSE = MeshRule(step=1.2, growth=2.0, reach=6.0, corner=0.03)
-LEAKY = MeshRule(absorber=4.0)
+LEAKY = MeshRule(absorber=8.0)
 
 # Beyond this overlap a mode counts as the one asked for. Neighbours in order or polarisation stay below 0.2.
 _ALIKE = 0.5
@@ -52,6 +52,8 @@ _ALIKE = 0.5
 _SURE = (0.6, 0.5)
 _COUNTS = (1, 6, 24)
 _TOLERANCE = 1e-11
+# The box of a bend ends at this share of the way to where light beside the guide would outrun the mode.
+_ROOM = 0.7
 
 
 class NoSuchModeError(ValueError):
@@ -68,7 +70,8 @@ class NoSuchModeError(ValueError):
 @dataclass(frozen=True)
 class VectorMode:
     """One vector mode. N: effective index, complex where the guide leaks; modes: the real part with its derivatives,
-    empty batch shape; likeness to the mode asked for; unknowns: free ones; space, field, section: for field plots."""
+    empty batch shape; likeness to the mode asked for; unknowns: free ones; electric: whether the symmetry plane is an
+    electric wall; vector (all unknowns), field, space, mesh and the section as `solved`: the field itself."""
 
     N: complex
     modes: GuideModes
@@ -77,7 +80,9 @@ class VectorMode:
     mesh: GuideMesh
     space: Space
     field: Field
-    section: CrossSection
+    vector: Complex
+    electric: bool
+    solved: CrossSection
 
 
 def vector_mode(
@@ -90,11 +95,13 @@ def vector_mode(
     degree: int = 3,
     mesh: GuideMesh | None = None,
     radius_um: float | None = None,
+    mapped: bool = False,
 ) -> VectorMode:
     """The mode of a lateral order (0 first) of one cross-section (empty batch shape).
 
     near: expected effective index; without it, or without a mesh, a coarse solve is made first. A substrate that no
-    film exceeds counts as buffer, unless `rule` has an absorber. radius_um: bend, see `vector_bend`.
+    film exceeds counts as buffer, unless `rule` has an absorber. radius_um: bend, see `vector_bend`; derivatives by
+    dimensions are not those of a bend then. mapped: the customary mapped index instead of a bend's exact materials.
     Raises NoSuchModeError where no field is like the one asked for.
     """
     work = section if rule.absorber else replace(section, n=without_substrate(section.n)[0])
@@ -107,9 +114,13 @@ def vector_mode(
                 slim, max(expected, beside + 1e-3), beside, replace(COARSE, step=max(COARSE.step, rule.step))
             )
             expected = _solve(slim, tm, order, rough, expected, 2, None, rule).N.real
-        mesh = lay_out(slim, expected, beside, rule, whole=radius_um is not None)
-    mode = _solve(slim, tm, order, mesh, expected, degree, radius_um, rule)
-    return replace(mode, modes=_spread_out(mode.modes, kept, section), section=section)
+        limit = np.inf if radius_um is None else _ROOM * radius_um * max(expected / beside - 1, 0.0)
+        mesh = lay_out(slim, expected, beside, rule, whole=radius_um is not None, side_limit_um=limit)
+    mode = _solve(slim, tm, order, mesh, expected, degree, radius_um, rule, mapped)
+    # Below a slab mode beside the guide the box only seems to hold the mode.
+    leaks = GuideFlag.LEAKS_SIDEWAYS if mode.N.real < side_index(slim) else GuideFlag.NONE
+    spread = _spread_out(mode.modes, kept, section)
+    return replace(mode, modes=replace(spread, flags=np.asarray(int(leaks))))
 
 
 def vector_mode_with_error(
@@ -183,35 +194,36 @@ def _solve(
     degree: int,
     radius_um: float | None,
     rule: MeshRule,
+    mapped: bool = False,
 ) -> VectorMode:
     k0 = 2 * np.pi / float(section.wavelength_um)
     space = space_on(mesh, mesh.place(section), degree)
     eps = (section.n**2)[mesh.layer][:, None]
     materials = Materials((eps, eps, eps), (np.ones(1), np.ones(1), np.ones(1)))
     if radius_um is not None:
-        materials = bent(materials, space, radius_um)
+        materials = (mapped_index if mapped else bent)(materials, space, radius_um)
     if rule.absorber:
         materials = stretched(materials, space, mesh.frame, float(section.width_um))
     electric = (order % 2 == 0) != tm
     held = held_unknowns(space, None if mesh.frame.whole else ("electric" if electric else "magnetic"))
     a, b, kept = matrices(space, materials, k0, held)
-    trial = trial_field(space, section, tm, order)
-    best: tuple[Likeness, complex, Field] | None = None
+    trial = trial_field(space, section, tm, order, near)
+    best: tuple[Likeness, complex, Field, Complex] | None = None
     for beta2, vector in _eigenpairs(a, b, -((k0 * near) ** 2)):
         whole = np.zeros(space.count, dtype=vector.dtype)
         whole[kept] = vector
         field = field_of(space, whole)
         like = likeness(space, materials, field, trial)
         if best is None or like.score > best[0].score:
-            best = like, beta2, field
+            best = like, beta2, field, whole
         if like.overlap > _SURE[0] and like.confinement > _SURE[1]:
             break
     if best is None or best[0].overlap <= _ALIKE:
         raise NoSuchModeError(tm, order, near, 0.0 if best is None else best[0].overlap)
-    like, beta2, field = best
+    like, beta2, field, whole = best
     N = complex(np.sqrt(beta2) / k0)
     modes = _derivatives(section, mesh, space, materials, field, k0, beta2)
-    return VectorMode(N, modes, like, kept.size, mesh, space, field, section)
+    return VectorMode(N, modes, like, kept.size, mesh, space, field, whole, electric, section)
 
 
 def _eigenpairs(a: Sparse, b: Sparse, shift: float) -> Iterator[tuple[complex, Complex]]:

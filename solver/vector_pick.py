@@ -41,14 +41,19 @@ class Trial:
     tm: bool
 
 
-def trial_field(space: Space, section: CrossSection, tm: bool, order: int) -> Trial:
-    """Trial field of a cross-section with empty batch shape, its substrate already replaced if too high."""
+def trial_field(space: Space, section: CrossSection, tm: bool, order: int, near: float) -> Trial:
+    """Trial field of a cross-section with empty batch shape, its substrate already replaced if too high; near: the
+    effective index expected."""
     wavelength = float(section.wavelength_um)
     N = mode_index(section.n, section.t_um, wavelength, 0, tm)
     width = float(section.width_um)
     within = np.abs(space.x) < width / 2
-    phase = (order + 1) * np.pi * space.x / width
-    lateral = np.cos(phase) if order % 2 == 0 else np.sin(phase)
+    # What the vertical slab leaves for the lateral wave number, between a part and all of what fits into the width.
+    left = max(float(N) ** 2 - near**2, 0.0) if np.isfinite(N) else 0.0
+    wave_number = np.clip(
+        2 * np.pi / wavelength * np.sqrt(left), (order + 0.3) * np.pi / width, (order + 1) * np.pi / width
+    )
+    lateral = np.cos(wave_number * space.x) if order % 2 == 0 else np.sin(wave_number * space.x)
     if np.isfinite(N):
         vertical = mode_field(N, section.n, section.t_um, wavelength, space.y, tm)
     else:  # no such slab mode: the middle of the core will do
