@@ -14,17 +14,32 @@ base of the correction map, no result to fit with.
 
 from __future__ import annotations
 
-from dataclasses import dataclass, replace
+import math
+from typing import NamedTuple
 
 import numpy as np
 from numpy.typing import ArrayLike, NDArray
 
-from .cross_section import CrossSection, GuideFlag, GuideModes, IntArray, without_substrate
-from .guide_columns import FEW, Columns, SideRule, columns, slabs
-from .layers import Array, flatten
-from .phase import total_phase
-from .scalar_slab import slab_count, slab_phase
-from .slab import mode_count
+from .bend import bent
+from .cross_section import CrossSection, GuideFlag, GuideModes, without_substrate
+from .guide_columns import (
+    Column,
+    Guide,
+    Lateral,
+    SideRule,
+    Value,
+    across,
+    anywhere,
+    column,
+    exists,
+    functions,
+    larger,
+    modes_above,
+    negated,
+    straight,
+    where,
+)
+from .layers import Array
 
 __all__ = ["WALL_COLUMNS", "SideRule", "eim_modes"]
 
@@ -32,26 +47,27 @@ BoolArray = NDArray[np.bool_]
 
 # Columns under each sloped wall.
 WALL_COLUMNS = 4
-
-
 # Share of the way from the side's index squared to the centre's below which a mode counts as near cut-off: there a
 # higher mode is lost with 2 % of the width (V is within 2 sqrt(b) of its cut-off), and of a mode 0, which has none, the
 # core holds less than a hundredth.
 NEAR = 1e-3
-# Estimated change of N, times the slab's own scale, at which a substrate under a thin buffer is spoken of.
+# What comes back from a substrate below the buffer, as a share of the field squared, at which it is spoken of.
 LEAK = 1e-5
+# Up to this many guides plain floats beat numpy's overhead.
+FEW = 32
 
 
-@dataclass(frozen=True, slots=True)
-class Lateral:
-    """Modes of the lateral slab (B): N; dcolumn (B, C) by the columns' indices; dwidth_per_um and dwall_per_um by the
-    width and by the extent of one wall; dwavelength_per_um (B)."""
+class Mode(NamedTuple):
+    """One mode with the fields of `GuideModes`; ddepth_per_um by the etch depth at fixed thickness."""
 
-    N: Array
-    dcolumn: Array
-    dwidth_per_um: Array
-    dwall_per_um: Array
-    dwavelength_per_um: Array
+    N: Value
+    dwidth_per_um: Value
+    dt_per_um: list[Value]
+    ddepth_per_um: Value
+    dsidewall_per_deg: Value
+    dn: list[Value]
+    dwavelength_per_um: Value
+    flags: Value
 
 
 def eim_modes(
@@ -61,172 +77,158 @@ def eim_modes(
     radius_um: ArrayLike | None = None,
     side_rule: SideRule = SideRule.CUT_OFF,
 ) -> GuideModes:
-    """Mode of lateral order `order` of each guide, with closed-form derivatives."""
-    if radius_um is not None:
-        raise NotImplementedError("bends")
-    shape = np.broadcast_shapes(section.shape, np.shape(tm), np.shape(order))
-    flat = _flat(section, shape)
-    is_tm, m = (np.broadcast_to(np.asarray(x), shape).reshape(-1) for x in (tm, order))
-    n, dropped = without_substrate(flat.n)
-    upright = flat.sidewall_deg == 90
-    undercut = flat.sidewall_deg > 90
-    walls = 0 if upright.all() else WALL_COLUMNS
-    shares = np.array([0.0, *((k + 0.5) / WALL_COLUMNS for k in range(walls)), 1.0])
-    cols = columns(flat, n, shares, is_tm, side_rule, undercut if undercut.any() else None)
-    held = cols.guided[:, 0]
-    if not held.all():
-        cols.N[~held] = 1.0  # an even slab, which guides nothing
-    lateral = _lateral(cols, flat, m, ~is_tm)
-    floor = np.maximum(n[:, 0], n[:, -1])
-    lateral.N[lateral.N <= floor] = np.nan
-    dwall = lateral.dwall_per_um
-    if upright.any():
-        dwall = np.where(upright, _upright_slope(flat, n, is_tm, side_rule, cols, lateral), dwall)
-    flags = _flags(flat, n, dropped, is_tm, m, cols, lateral)
-    return _chain(flat, cols, lateral, dwall, upright, dropped, flags, shape)
+    """Mode of lateral order `order` of each guide, with all derivatives in closed form.
+
+    section: batch of guides (...). tm: False for quasi-TE, True for quasi-TM; order: number of lateral nodes; radius_um:
+    of a bend's centre line, None or infinite for a straight guide (see `bend`). All three (...), broadcast with the
+    batch. side_rule: see `SideRule`.
+
+    Returns `GuideModes` of the broadcast shape: N and derivatives are NaN where there is no mode, with the flag that says
+    why; `error` and `group_error` are NaN throughout, for the method cannot tell its own error. Where a substrate of
+    high index was replaced by its buffer, its derivative is zero. Sloped walls are `WALL_COLUMNS` columns each; at
+    sidewall_deg = 90 the model's slope by the angle jumps, and the mean of both sides is given. FLAG SECOND_MODE asks
+    for lateral modes of vertical order 0 alone. A mode at or below the index of a half-space counts as not guided.
+    Raises ValueError for a radius that is not positive.
+    """
+    radius = np.inf if radius_um is None else np.asarray(radius_um, dtype=float)
+    if not np.all(radius > 0):
+        raise ValueError("radius_um must be positive and not NaN")
+    shape = np.broadcast_shapes(section.shape, np.shape(tm), np.shape(order), np.shape(radius))
+    size = math.prod(shape)
+    n, dropped = without_substrate(section.n)
+    layers = n.shape[-1]
+
+    def flat(x: ArrayLike, *tail: int) -> Array:
+        return np.broadcast_to(x, (*shape, *tail)).reshape(size, *tail)
+
+    parts = [
+        flat(n, layers), flat(section.t_um, layers - 2), flat(section.width_um), flat(section.wavelength_um),
+        flat(section.depth_um), flat(section.sidewall_deg), flat(np.asarray(tm, dtype=bool)), flat(order),
+        flat(radius), flat(dropped),
+    ]  # fmt: skip
+    if size <= FEW:
+        rows = [_one(section.core, side_rule, *row) for row in zip(*(x.tolist() for x in parts))]
+        mode = Mode(*(np.array(x) for x in zip(*rows)))
+    else:
+        n_, t = (list(np.ascontiguousarray(x.T)) for x in parts[:2])
+        many = _one(section.core, side_rule, n_, t, *parts[2:])
+        mode = Mode(*(np.stack(x, axis=-1) if isinstance(x, list) else x for x in many))
+    return _shaped(mode, section, shape, flat(dropped))
 
 
-def _flat(section: CrossSection, shape: tuple[int, ...]) -> CrossSection:
-    if section.shape == shape:
-        return section.flat()
-    return replace(
-        section,
-        n=np.broadcast_to(section.n, (*shape, section.n.shape[-1])),
-        t_um=np.broadcast_to(section.t_um, (*shape, section.t_um.shape[-1])),
-        width_um=np.broadcast_to(section.width_um, shape),
-        wavelength_um=np.broadcast_to(section.wavelength_um, shape),
-        etch_um=None if section.etch_um is None else np.broadcast_to(section.etch_um, shape),
-        sidewall_deg=np.broadcast_to(section.sidewall_deg, shape),
-    ).flat()
-
-
-def across(cols: Columns, flat: CrossSection) -> tuple[Array, Array]:
-    """The lateral slab from side to side: indices (B, 2C-1) and thicknesses (B, 2C-3)."""
-    walls = cols.N.shape[1] - 2
-    n = np.concatenate([cols.N[:, :0:-1], cols.N], axis=1)
-    t = np.zeros((n.shape[0], 2 * walls + 1))
-    extent = np.abs(flat.wall_um)
-    if walls:
-        t[:] = (extent / walls)[:, None]
-    t[:, walls] = flat.width_um - extent
-    return n, t
-
-
-def _lateral(cols: Columns, flat: CrossSection, order: IntArray, tm: BoolArray) -> Lateral:
-    walls = cols.N.shape[1] - 2
-    n, t = across(cols, flat)
-    d = slabs(n, t, flat.wavelength_um, order, tm)
-    dcolumn = np.zeros_like(cols.N)
-    dcolumn[:, 0] = d.dn[:, walls + 1]
-    dcolumn[:, 1:] = d.dn[:, walls + 2 :] + d.dn[:, walls::-1]
-    dwidth = d.dt_per_um[:, walls]
-    dwall = (d.dt_per_um.sum(axis=1) - dwidth) / walls - dwidth if walls else np.zeros_like(dwidth)
-    return Lateral(d.N, dcolumn, dwidth, dwall, d.dwavelength_per_um)
-
-
-def _upright_slope(
-    flat: CrossSection, n: Array, tm: BoolArray, rule: SideRule, cols: Columns, lateral: Lateral
-) -> Array:
-    """dN/d(extent of a wall) at vertical walls, where the two slopes of the model differ: their mean. Simpson's rule
-    over the shares gone, at whose ends foot and undercut columns are the same."""
-    half = np.array([0.5])
-    foot = columns(flat, n, half, tm, rule).N[:, 0]
-    under = columns(flat, n, half, tm, rule, np.ones_like(tm)).N[:, 0]
-    side, centre, q = cols.N[:, -1] ** 2, cols.N[:, 0] ** 2, lateral.N**2
-
-    def pull(index_squared: Array) -> Array:
-        # h of `fields` at the wall, for psi = 1 there: what a film of that index would add to N per length
-        tm_wise = index_squared * (q - side) / side**2 + 1 - q / index_squared
-        return np.where(tm, index_squared - side, tm_wise)
-
-    return np.asarray(2 / 3 * (pull(foot**2) - pull(under**2)) / pull(centre) * lateral.dwidth_per_um)
-
-
-def _chain(
-    flat: CrossSection,
-    cols: Columns,
-    lateral: Lateral,
-    dwall: Array,
-    upright: BoolArray,
-    dropped: BoolArray,
-    flags: IntArray,
-    shape: tuple[int, ...],
-) -> GuideModes:
-    """Derivatives by the guide's quantities from those of both steps."""
-    w = lateral.dcolumn
-    w = np.where((lateral.N == lateral.N)[:, None], w, np.nan)
-    dn = (w[:, :, None] * cols.dn).sum(axis=1)
-    dt = (w[:, :, None] * cols.dt_per_um).sum(axis=1)
-    angle = np.radians(flat.sidewall_deg)
-    lean = np.where(flat.sidewall_deg > 90, -1.0, 1.0)
-    ddepth = (w * cols.ddepth_per_um).sum(axis=1) + np.where(upright, 0.0, dwall * lean / np.tan(angle))
-    dsidewall = -dwall * lean * flat.depth_um / np.sin(angle) ** 2 * (np.pi / 180)
+def _shaped(mode: Mode, section: CrossSection, shape: tuple[int, ...], dropped: BoolArray) -> GuideModes:
+    N, dwidth, dt, ddepth, dsidewall, dn, dwavelength, flags = mode
     dn[:, 1] += np.where(dropped, dn[:, 0], 0.0)
-    dn[:, 0] = np.where(dropped, 0.0, dn[:, 0])
-    gone = np.where(lateral.N == lateral.N, 0.0, np.nan)
-    detch = ddepth
-    if flat.etch_um is None:
-        dt[:, flat.core - 1] += ddepth
-        detch = gone
+    dn[dropped, 0] *= 0.0
+    if section.etch_um is None:
+        dt[:, section.core - 1] += ddepth
+        ddepth = ddepth * 0.0
     nan = np.full(shape, np.nan)
-    dwavelength = (w * cols.dwavelength_per_um).sum(axis=1) + lateral.dwavelength_per_um
     return GuideModes(
-        lateral.N.reshape(shape), (lateral.dwidth_per_um + gone).reshape(shape), dt.reshape(*shape, -1),
-        detch.reshape(shape), (dsidewall + gone).reshape(shape), (dn + gone[:, None]).reshape(*shape, -1),
-        dwavelength.reshape(shape), flags.reshape(shape), nan, nan,
+        N.reshape(shape), dwidth.reshape(shape), dt.reshape(*shape, -1), ddepth.reshape(shape),
+        dsidewall.reshape(shape), dn.reshape(*shape, -1), dwavelength.reshape(shape), flags.reshape(shape), nan, nan,
     )  # fmt: skip
 
 
+def _one(
+    core: int,
+    rule: SideRule,
+    n: list[Value],
+    t_um: list[Value],
+    width_um: Value,
+    wavelength_um: Value,
+    depth_um: Value,
+    sidewall_deg: Value,
+    tm: Value,
+    order: Value,
+    radius_um: Value,
+    dropped: Value,
+) -> Mode:
+    """One guide, of floats, or many at once, of arrays (B)."""
+    g = Guide(n, t_um, core, width_um, wavelength_um, depth_um, sidewall_deg, tm, order)
+    slopes = anywhere(sidewall_deg != 90)
+    undercut = sidewall_deg > 90
+    shares = [(k + 0.5) / WALL_COLUMNS for k in range(WALL_COLUMNS)] if slopes else []
+    centre, side = column(g, 0.0, rule), column(g, 1.0, rule)
+    cols = [centre, *(column(g, share, rule, undercut) for share in shares), side]
+    held = centre.guided
+    # Where the core holds no mode all columns alike: an even slab, which guides nothing.
+    index = [x.N for x in cols] if not anywhere(negated(held)) else [where(held, x.N, 1.0) for x in cols]
+    tangent = functions(sidewall_deg).tan(sidewall_deg * (math.pi / 180))
+    upright = sidewall_deg == 90
+    wall = where(upright, 0.0, abs(depth_um / tangent))
+    lateral = straight(index, width_um, wall, wavelength_um, order, negated(tm))
+    flags = 0
+    if anywhere(radius_um < math.inf):
+        lateral, flags = bent(lateral, index, width_um, wall, wavelength_um, order, negated(tm), radius_um)
+    N = where(held & (lateral.N > larger(n[0], n[-1])), lateral.N, math.nan)
+    dwall = lateral.dwall_per_um
+    if anywhere(upright):
+        dwall = where(upright, _upright_slope(g, rule, centre.N, side.N, lateral), dwall)
+    flags = flags | _flags(g, index, wall, centre, side, N, dropped)
+    return _chain(g, cols, lateral, N, dwall, flags)
+
+
+def _upright_slope(g: Guide, rule: SideRule, centre: Value, side: Value, lateral: Lateral) -> Value:
+    """dN/d(extent of a wall) at vertical walls, where the model's two slopes differ: their mean. Simpson's rule over the
+    shares gone, at whose ends the columns under a wide foot and under an undercut are the same."""
+    foot, under = column(g, 0.5, rule).N, column(g, 0.5, rule, where(g.sidewall_deg == 90, True, True)).N
+    q = lateral.N * lateral.N
+    edge = side * side
+
+    def pull(index: Value) -> Value:
+        # h of `fields` at the wall for psi = 1 there: what a film of that index adds to N per length
+        e = index * index
+        return where(g.tm, e - edge, e * (q - edge) / (edge * edge) + 1 - q / e)
+
+    whole = pull(centre)
+    slope = 2 / 3 * (pull(foot) - pull(under)) * lateral.dwidth_per_um
+    return slope / where(exists(slope) & (whole != 0), whole, 1.0)
+
+
 def _flags(
-    flat: CrossSection,
-    n: Array,
-    dropped: BoolArray,
-    tm: BoolArray,
-    order: IntArray,
-    cols: Columns,
-    lateral: Lateral,
-) -> IntArray:
-    N, held = lateral.N, cols.guided[:, 0]
-    found = N == N
-    flags = np.where(held, 0, int(GuideFlag.NO_VERTICAL_MODE))
-    flags |= np.where(held & ~found, int(GuideFlag.NO_LATERAL_MODE), 0)
-    flags |= np.where(cols.guided[:, -1], 0, int(GuideFlag.SIDES_GUIDE_NOTHING))
-    side, centre = cols.N[:, -1] ** 2, cols.N[:, 0] ** 2
-    flags |= np.where(N**2 - side < NEAR * (centre - side), int(GuideFlag.NEAR_CUT_OFF), 0)
-    flags |= np.where(found & (order == 0) & (_lateral_count(cols, flat, ~tm) > 1), int(GuideFlag.SECOND_MODE), 0)
-    flags |= np.where(_leaks_sideways(flat, n, ~tm, N), int(GuideFlag.LEAKS_SIDEWAYS), 0)
-    if dropped.any():
-        decay = np.sqrt(np.maximum(N**2 - n[:, 0] ** 2, 0.0)) * (2 * np.pi / flat.wavelength_um)
-        leak = 2 * np.exp(-2 * decay * flat.t_um[:, 0]) > LEAK
-        flags |= np.where(dropped & found & leak, int(GuideFlag.LEAKS_DOWN), 0)
-    return flags
+    g: Guide, index: list[Value], wall_um: Value, centre: Column, side: Column, N: Value, dropped: Value
+) -> Value:
+    found = exists(N)
+    core, beside = index[0] * index[0], index[-1] * index[-1]
+    flags = where(centre.guided, 0, int(GuideFlag.NO_VERTICAL_MODE))
+    flags = flags | where(centre.guided & negated(found), int(GuideFlag.NO_LATERAL_MODE), 0)
+    flags = flags | where(side.guided, 0, int(GuideFlag.SIDES_GUIDE_NOTHING))
+    flags = flags | where(N * N - beside < NEAR * (core - beside), int(GuideFlag.NEAR_CUT_OFF), 0)
+    lateral = modes_above(*across(index, g.width_um, wall_um), g.wavelength_um, negated(g.tm), 0.0)
+    flags = flags | where(found & (g.order == 0) & (lateral > 1), int(GuideFlag.SECOND_MODE), 0)
+    t = list(g.t_um)
+    t[g.core - 1] = larger(t[g.core - 1] - g.depth_um, 0.0)
+    if g.core < len(t):
+        t[g.core] = t[g.core] + g.depth_um
+    other = modes_above(g.n, t, g.wavelength_um, negated(g.tm), where(found, N, math.inf))
+    flags = flags | where(found & (other > 0), int(GuideFlag.LEAKS_SIDEWAYS), 0)
+    f = functions(N)
+    decay = f.sqrt(where(found & dropped, N * N - g.n[0] * g.n[0], 0.0)) * (2 * math.pi / g.wavelength_um)
+    leaks = found & dropped & (2 * f.exp(-2 * decay * g.t_um[0]) > LEAK)
+    return flags | where(leaks, int(GuideFlag.LEAKS_DOWN), 0)
 
 
-def _lateral_count(cols: Columns, flat: CrossSection, tm: BoolArray) -> IntArray:
-    """Number of modes (B) of the lateral slab."""
-    walls = cols.N.shape[1] - 2
-    if not walls:
-        span = np.sqrt(np.maximum(cols.N[:, 0] ** 2 - cols.N[:, 1] ** 2, 0.0))
-        return np.ceil(2 * flat.width_um / flat.wavelength_um * span).astype(np.int64)
-    n, t = across(cols, flat)
-    if tm.size <= FEW:
-        each = zip(n.tolist(), t.tolist(), flat.wavelength_um.tolist(), tm.tolist())
-        return np.array([slab_count(*row) for row in each])
-    return mode_count(n, t, flat.wavelength_um, tm)
+def _chain(g: Guide, cols: list[Column], lateral: Lateral, N: Value, dwall: Value, flags: Value) -> Mode:
+    """Derivatives by the guide's quantities from those of both steps."""
+    gone = where(exists(N), 0.0, math.nan)
+    weights = [x + gone for x in lateral.dcolumn]
 
+    def through(parts: list[Value]) -> Value:
+        return sum(x * y for x, y in zip(weights, parts))
 
-def _leaks_sideways(flat: CrossSection, n: Array, tm: BoolArray, N: Array) -> BoolArray:
-    """Where N lies below mode 0 of polarisation tm of the stack beside the guide."""
-    t = flat.column(1.0)
-    out = np.zeros(N.size, dtype=bool)
-    if N.size <= FEW:
-        for i, row in enumerate(zip(n.tolist(), t.tolist(), flat.wavelength_um.tolist(), tm.tolist(), N.tolist())):
-            out[i] = row[-1] == row[-1] and slab_phase(*row) > 0
-        return out
-    known = np.flatnonzero(N == N)
-    layers = flatten(n[known], None, t[known], flat.wavelength_um[known], tm[known], known.shape)
-    q = N[known] ** 2
-    inside = np.flatnonzero(q < layers.ceiling())
-    if inside.size:
-        out[known[inside]] = total_phase(layers.take(inside), q[inside])[0] > np.pi
-    return out
+    f = functions(g.sidewall_deg)
+    angle = g.sidewall_deg * (math.pi / 180)
+    sine = f.sin(angle)
+    lean = where(g.sidewall_deg > 90, -1.0, 1.0)
+    cotangent = where(g.sidewall_deg == 90, 0.0, lean / f.tan(angle))
+    return Mode(
+        N,
+        lateral.dwidth_per_um + gone,
+        [through([c.dt_per_um[j] for c in cols]) for j in range(len(g.t_um))],
+        through([c.ddepth_per_um for c in cols]) + dwall * cotangent,
+        -dwall * lean * g.depth_um / (sine * sine) * (math.pi / 180) + gone,
+        [through([c.dn[j] for c in cols]) for j in range(len(g.n))],
+        through([c.dwavelength_per_um for c in cols]) + lateral.dwavelength_per_um,
+        flags,
+    )

@@ -1,41 +1,33 @@
 """Columns of the effective index method: the vertical slabs through and beside a guide, and their slab modes.
 
-Columns run from the middle of the guide outwards: the full core, then those under a sloped wall, then the side. Their
-indices follow from one list of layers with the core split in three, so that walls of either slope fit it:
-
-    ... core, fill, core, fill, ...    thicknesses for a share r of the etch depth d gone, core t and fill T:
-        foot wider (sidewall < 90)     t - r d, 0, 0, T + r d
-        undercut (sidewall > 90)       t - d, r d, (1 - r) d, T
+Written once for two uses: every `Value` is a float (a guide by itself, without numpy's overhead per call) or an array
+(B) (guides in bulk). Lists run over layers.
 """
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+import math
+from collections.abc import Sequence
 from enum import Enum
-from typing import NamedTuple
+from typing import Any, NamedTuple
 
 import numpy as np
-from numpy.typing import NDArray
 
-from .cross_section import CrossSection
 from .fields import mode_derivatives
-from .layers import Array
-from .scalar_slab import slab_mode
+from .layers import flatten
+from .phase import total_phase
+from .scalar_slab import SlabMode, slab_mode, slab_phase
 from .slab import mode_index
 
-BoolArray = NDArray[np.bool_]
-
-# Up to this many slabs plain floats beat numpy's overhead.
-FEW = 32
+Value = Any  # float or array (B); bool or array of bool where it is a condition
 
 
 class SideRule(Enum):
     """What stands for the effective index of a column that guides nothing.
 
-    CUT_OFF: the larger index of the two half-spaces, where the column's mode would be cut off: continuous, and smooth,
-    as the column comes to guide. FILL: the index of the material that stands beside the core, that is of the layer
-    above it. WEIGHTED: root of the mean permittivity of the column, weighted with the squared field of the full core's
-    slab mode.
+    CUT_OFF: the larger index of the two half-spaces, at which the column's mode is cut off: smooth as it comes to
+    guide. FILL: the index of the layer above the core, which stands beside it. WEIGHTED: root of the column's mean
+    permittivity, weighted with the squared field (E_y or H_y of the slab mode) of the full core's column.
     """
 
     CUT_OFF = "cut-off"
@@ -43,130 +35,194 @@ class SideRule(Enum):
     WEIGHTED = "weighted"
 
 
-class Slabs(NamedTuple):
-    """Modes of slabs (B) and their derivatives: N; dn (B, L); dt_per_um (B, L-2); dwavelength_per_um (B); dn_normal
-    (B, L), zero for isotropic layers. NaN where there is no mode."""
+class Guide(NamedTuple):
+    """One guide, or many: as `CrossSection`, the substrate being the buffer where that rules, with the polarisation
+    and the lateral order asked for."""
 
-    N: Array
-    dn: Array
-    dt_per_um: Array
-    dwavelength_per_um: Array
-    dn_normal: Array
-
-
-@dataclass(frozen=True, slots=True)
-class Columns:
-    """Effective indices N (B, C) of the columns, centre first and side last, and their derivatives: dn (B, C, L);
-    dt_per_um (B, C, L-2) at fixed etch depth; ddepth_per_um (B, C); dwavelength_per_um (B, C). guided (B, C): whether
-    there is a slab mode; elsewhere N is by the rule for sides, NaN in the centre."""
-
-    N: Array
-    dn: Array
-    dt_per_um: Array
-    ddepth_per_um: Array
-    dwavelength_per_um: Array
-    guided: BoolArray
+    n: list[Value]
+    t_um: list[Value]
+    core: int
+    width_um: Value
+    wavelength_um: Value
+    depth_um: Value
+    sidewall_deg: Value
+    tm: Value
+    order: Value
 
 
-def slabs(
-    n: Array, t_um: Array, wavelength_um: Array, order: Array, tm: BoolArray, n_normal: Array | None = None
-) -> Slabs:
-    """Modes of a batch of slabs: n (B, L), t_um (B, L-2), the rest (B). One by one where they are few."""
-    if wavelength_um.size > FEW:
-        N = mode_index(n, t_um, wavelength_um, order, tm, n_normal)
-        d = mode_derivatives(N, n, t_um, wavelength_um, tm, n_normal)
-        return Slabs(N, d.dn, d.dt_per_um, d.dwavelength_per_um, d.dn_normal)
-    normal = [None] * wavelength_um.size if n_normal is None else n_normal.tolist()
-    modes = [
-        slab_mode(*row)
-        for row in zip(n.tolist(), t_um.tolist(), wavelength_um.tolist(), order.tolist(), tm.tolist(), normal)
+class Column(NamedTuple):
+    """Effective index of a column and its derivatives: dn by the layers' indices, dt_per_um by their thicknesses at
+    fixed etch depth. guided: whether there is a slab mode; else the rule for sides was applied."""
+
+    N: Value
+    dn: list[Value]
+    dt_per_um: list[Value]
+    ddepth_per_um: Value
+    dwavelength_per_um: Value
+    guided: Value
+
+
+def where(condition: Value, yes: Value, no: Value) -> Value:
+    """`numpy.where` that leaves floats floats."""
+    return (yes if condition else no) if isinstance(condition, bool) else np.where(condition, yes, no)
+
+
+def negated(condition: Value) -> Value:
+    return (not condition) if isinstance(condition, bool) else ~condition
+
+
+def exists(x: Value) -> Value:
+    """False where x is NaN."""
+    return not math.isnan(x) if isinstance(x, float) else ~np.isnan(x)
+
+
+def anywhere(condition: Value) -> bool:
+    return condition if isinstance(condition, bool) else bool(condition.any())
+
+
+def larger(x: Value, y: Value) -> Value:
+    return max(x, y) if isinstance(x, float) and isinstance(y, float) else np.maximum(x, y)
+
+
+def functions(x: Value) -> Any:
+    """The module whose exp, log, sqrt, sin and tan suit x."""
+    return math if isinstance(x, float) else np
+
+
+def slab(
+    n: Sequence[Value],
+    t_um: Sequence[Value],
+    wavelength_um: Value,
+    order: Value,
+    tm: Value,
+    n_normal: Sequence[Value] | None = None,
+) -> SlabMode:
+    """One mode of a slab with its derivatives, as `scalar_slab.slab_mode`, of floats or arrays (B)."""
+    if isinstance(wavelength_um, float):
+        return slab_mode(list(n), list(t_um), wavelength_um, order, tm, None if n_normal is None else list(n_normal))
+    stack = _stacked(n, wavelength_um), _stacked(t_um, wavelength_um), wavelength_um
+    normal = None if n_normal is None else _stacked(n_normal, wavelength_um)
+    N = mode_index(*stack, order, tm, normal)
+    d = mode_derivatives(N, *stack, tm, normal)
+    return SlabMode(N, list(d.dn.T), list(d.dt_per_um.T), d.dwavelength_per_um, list(d.dn_normal.T))
+
+
+def modes_above(n: Sequence[Value], t_um: Sequence[Value], wavelength_um: Value, tm: Value, N: Value) -> Value:
+    """As many slab modes lie above an effective index N as this number counts, rounded up; see `slab_phase`."""
+    if isinstance(wavelength_um, float):
+        return slab_phase(list(n), list(t_um), wavelength_um, tm, N)
+    out = np.full(wavelength_um.shape, -1.0)
+    films = _stacked(t_um, wavelength_um)
+    layers = flatten(_stacked(n, wavelength_um), None, films, wavelength_um, tm, out.shape)
+    q = np.maximum(np.broadcast_to(N, out.shape) ** 2, layers.cut_off())
+    can = np.flatnonzero(q < layers.ceiling())
+    if can.size:
+        out[can] = total_phase(layers.take(can), q[can], at_cut_off=True)[0] / np.pi - 1
+    return out
+
+
+def _stacked(values: Sequence[Value], like: Value) -> Any:
+    return np.stack([np.broadcast_to(x, like.shape) for x in values], axis=-1)
+
+
+def column(g: Guide, share: float, rule: SideRule, undercut: Value = False) -> Column:
+    """The column in which a share of the etch depth d is gone: nothing of it in the middle of the guide, all beside.
+
+    With t the core's thickness and T that of the film above, the core becomes t - share d and the film T + share d.
+    Under an `undercut` wall the fill lies below what is left: core t - d, fill share d, core (1 - share) d, then T.
+    """
+    split = anywhere(undercut)
+    n, t, by_depth = _split_column(g, share, undercut) if split else _plain_column(g, share)
+    mode = slab(n, t, g.wavelength_um, g.order * 0, g.tm)
+    ddepth = sum(x * y for x, y in zip(by_depth, mode.dt_per_um) if not isinstance(x, float) or x != 0)
+    dn, dt = mode.dn, mode.dt_per_um
+    if split:
+        k = g.core
+        dn = [*dn[:k], dn[k] + dn[k + 2], dn[k + 1] + dn[k + 3], *dn[k + 4 :]]
+        dt = dt[:k] + dt[k + 2 :]
+    found = Column(mode.N, dn, dt, ddepth, mode.dwavelength_per_um, exists(mode.N))
+    if share == 0 or not anywhere(negated(found.guided)):
+        return found
+    ruled = _ruled(g, share, rule, undercut)
+    if isinstance(found.guided, bool):
+        return ruled
+    return Column(*(_either(found.guided, x, y) for x, y in zip(found[:-1], ruled[:-1])), found.guided)
+
+
+def _either(condition: Value, yes: Value, no: Value) -> Any:
+    return [where(condition, x, y) for x, y in zip(yes, no)] if isinstance(yes, list) else where(condition, yes, no)
+
+
+def _plain_column(g: Guide, share: float) -> tuple[list[Value], list[Value], list[Value]]:
+    """Indices, thicknesses and the thicknesses' derivatives by the etch depth."""
+    t = list(g.t_um)
+    by_depth = [0.0] * len(t)
+    if share > 0:
+        gone = share * g.depth_um
+        t[g.core - 1] = larger(t[g.core - 1] - gone, 0.0)
+        by_depth[g.core - 1] = -share
+        if g.core < len(t):
+            t[g.core] = t[g.core] + gone
+            by_depth[g.core] = share
+    return g.n, t, by_depth
+
+
+def _split_column(g: Guide, share: float, undercut: Value) -> tuple[list[Value], list[Value], list[Value]]:
+    """The same with the core split in three: core, fill, core."""
+    k = g.core
+    n = [*g.n[: k + 1], g.n[k + 1], g.n[k], *g.n[k + 1 :]]
+    by_depth = [0.0] * (k - 1) + [
+        where(undercut, -1.0, -share),
+        where(undercut, share, 0.0),
+        where(undercut, 1 - share, 0.0),
     ]
-    return Slabs(*(np.array(x) for x in zip(*modes)))
+    if k < len(g.t_um):
+        by_depth += [where(undercut, 0.0, share), *[0.0] * (len(g.t_um) - k - 1)]
+    base = [*g.t_um[:k], 0.0, 0.0, *g.t_um[k:]]
+    t = [larger(x + y * g.depth_um, 0.0) for x, y in zip(base, by_depth)]
+    return n, t, by_depth
 
 
-def columns(
-    section: CrossSection,
-    n: Array,
-    shares: Array,
-    tm: BoolArray,
-    rule: SideRule,
-    undercut: BoolArray | None = None,
-) -> Columns:
-    """Columns of a flat batch (B): n (B, L) without a substrate of high index; `shares` (C) of the etch depth gone; tm
-    (B): polarisation of the slabs; undercut (B): which guides have their walls that way, None for none."""
-    core, size, count = section.core, section.wavelength_um.size, shares.size
-    if undercut is None:
-        t, by_depth = _plain_thicknesses(section, shares)
-        split_n = n
-    else:
-        t, by_depth = _split_thicknesses(section, shares, undercut)
-        split_n = n[:, [*range(core + 1), core + 1, core, *range(core + 1, n.shape[1])]]
-    total = size * count
-    wave, is_tm = (np.repeat(x, count) for x in (section.wavelength_um, tm))
-    found = slabs(np.repeat(split_n, count, axis=0), t.reshape(total, -1), wave, np.zeros(total, dtype=int), is_tm)
-    N = found.N.reshape(size, count)
-    dn = found.dn.reshape(size, count, -1)
-    dt = found.dt_per_um.reshape(size, count, -1)
-    ddepth = (dt * by_depth).sum(axis=-1)
-    if undercut is not None:
-        dn = _merged(dn, core, core + 1)
-        dt = np.concatenate([dt[..., :core], dt[..., core + 2 :]], axis=-1)
-    out = Columns(N, dn, dt, ddepth, found.dwavelength_per_um.reshape(size, count), N == N)
-    for k in range(count):
-        if shares[k] > 0 and not out.guided[:, k].all():
-            _fill_in(out, k, n, core, rule)
-    return out
-
-
-def _plain_thicknesses(section: CrossSection, shares: Array) -> tuple[Array, Array]:
-    """Thicknesses (B, C, L-2) and their derivatives by the etch depth (C, L-2)."""
-    t = section.t_um
-    core, films = section.core, t.shape[1]
-    by_depth = np.zeros((shares.size, films))
-    by_depth[:, core - 1] = -shares
-    if core < films:
-        by_depth[:, core] = shares
-    out = t[:, None, :] + by_depth * section.depth_um[:, None, None]
-    np.maximum(out, 0.0, out=out)
-    return out, by_depth
-
-
-def _split_thicknesses(section: CrossSection, shares: Array, undercut: BoolArray) -> tuple[Array, Array]:
-    """The same with the core split in three: (B, C, L) and (B, C, L)."""
-    t = section.t_um
-    core, films = section.core, t.shape[1]
-    r, under = shares[None, :], undercut[:, None]
-    by_depth = np.zeros((t.shape[0], shares.size, films + 2))
-    # the centre holds the whole core, and so does an undercut column with nothing gone
-    by_depth[..., core - 1] = np.where(under, -1.0, -r)
-    by_depth[..., core] = np.where(under, r, 0.0)
-    by_depth[..., core + 1] = np.where(under, 1 - r, 0.0)
-    if core < films:
-        by_depth[..., core + 2] = np.where(under, 0.0, r)
-    base = np.zeros_like(by_depth)
-    base[..., :core] = t[:, None, :core]
-    base[..., core + 2 :] = t[:, None, core:]
-    return np.maximum(base + by_depth * section.depth_um[:, None, None], 0.0), by_depth
-
-
-def _merged(dn: Array, core: int, fill: int) -> Array:
-    """Derivatives by the indices of the stack (..., L) from those of the stack with its core split (..., L+2)."""
-    out = np.concatenate([dn[..., : core + 1], dn[..., core + 3 :]], axis=-1)
-    out[..., fill] += dn[..., core + 1]
-    out[..., core] += dn[..., core + 2]
-    return out
-
-
-def _fill_in(c: Columns, k: int, n: Array, core: int, rule: SideRule) -> None:
-    """The rule for sides, in place, where column k holds no mode."""
-    if rule is SideRule.WEIGHTED:
-        raise NotImplementedError
-    rows = np.flatnonzero(~c.guided[:, k])
+def _ruled(g: Guide, share: float, rule: SideRule, undercut: Value) -> Column:
+    """What the rule says of a column that guides nothing."""
+    zero = g.wavelength_um * 0.0
+    dn, dt = [zero] * len(g.n), [zero] * len(g.t_um)
     if rule is SideRule.FILL:
-        layer = np.full(rows.size, core + 1)
-    else:
-        layer = np.where(n[rows, 0] >= n[rows, -1], 0, n.shape[1] - 1)
-    c.N[rows, k] = n[rows, layer]
-    for x in (c.dn, c.dt_per_um, c.ddepth_per_um, c.dwavelength_per_um):
-        x[rows, k] = 0.0
-    c.dn[rows, k, layer] = 1.0
+        dn[g.core + 1] = zero + 1.0
+        return Column(g.n[g.core + 1], dn, dt, zero, zero, False)
+    below = g.n[0] >= g.n[-1]
+    dn[0] = where(below, zero + 1.0, zero)
+    dn[-1] = where(below, zero, zero + 1.0)
+    return Column(where(below, g.n[0], g.n[-1]), dn, dt, zero, zero, False)
+
+
+class Lateral(NamedTuple):
+    """Mode of the lateral slab: N; dcolumn by the columns' indices, centre first; dwidth_per_um and dwall_per_um by the
+    width and by the extent of one wall; dwavelength_per_um."""
+
+    N: Value
+    dcolumn: list[Value]
+    dwidth_per_um: Value
+    dwall_per_um: Value
+    dwavelength_per_um: Value
+
+
+def across(index: list[Value], width_um: Value, wall_um: Value) -> tuple[list[Value], list[Value]]:
+    """Indices and thicknesses of the lateral slab from side to side; index: of the columns, centre first, side last."""
+    walls = len(index) - 2
+    each = [wall_um / walls] * walls if walls else []
+    return [*index[:0:-1], *index], [*each, width_um - wall_um, *each]
+
+
+def straight(
+    index: list[Value], width_um: Value, wall_um: Value, wavelength_um: Value, order: Value, tm: Value
+) -> Lateral:
+    """Mode of the lateral slab of a straight guide. tm: polarisation of this slab, the other one than the columns'."""
+    n, t = across(index, width_um, wall_um)
+    mode = slab(n, t, wavelength_um, order, tm)
+    walls = len(index) - 2
+    dn, dt = mode.dn, mode.dt_per_um
+    dcolumn = [dn[walls + 1], *(dn[walls + 1 + k] + dn[walls + 1 - k] for k in range(1, walls + 2))]
+    dwidth = dt[walls]
+    dwall = (sum(dt) - dwidth) / walls - dwidth if walls else dwidth * 0.0
+    return Lateral(mode.N, dcolumn, dwidth, dwall, mode.dwavelength_per_um)

@@ -7,7 +7,7 @@ smooth from cut-off to ceiling.
 
 from __future__ import annotations
 
-from math import asin, atan2, ceil, cos, exp, inf, log, nan, pi, sin, sinh, sqrt
+from math import asin, atan2, ceil, cos, exp, inf, isnan, log, nan, pi, sin, sinh, sqrt
 from typing import NamedTuple
 
 from .layers import SMALLEST_WAVE_NUMBER
@@ -50,9 +50,11 @@ class _Integrals(NamedTuple):
 
 
 class _Edge(NamedTuple):
-    """Where a sweep enters a film: angle, integral of b psi^2 so far over R^2, log R^2."""
+    """Where a sweep enters a film: angle, its sine and cosine, integral of b psi^2 so far over R^2, log R^2."""
 
     theta: float
+    sin: float
+    cos: float
     wron: float
     log_r2: float
 
@@ -67,9 +69,10 @@ def slab_mode(
     """
     stack = _coefficients(n, t_um, wavelength_um, tm, n_normal)
     first, last = _core(stack)
-    q = _root(_trimmed(stack, first, last), order) if first <= last else nan
-    if q != q:
+    N = sqrt(_root(_trimmed(stack, first, last), order)) if first <= last else nan
+    if isnan(N):
         return SlabMode(nan, [nan] * len(n), [nan] * len(t_um), nan, [nan] * len(n))
+    q = N * N
     field = _whole_field(stack, q, first, last)
     return _derivatives(stack, q, field, n, n_normal, wavelength_um, tm)
 
@@ -147,71 +150,85 @@ def _wave_numbers(stack: _Stack, q: float) -> tuple[list[float], list[bool]]:
     return s, osc
 
 
-def _sweep(stack: _Stack, s: list[float], osc: list[bool], *, upward: bool) -> list[_Edge]:
-    """Shoot from one half-space over all films: what `phase.sweep` does."""
-    films = len(stack.tau)
-    order = range(1, films + 1) if upward else range(films, 0, -1)
-    start, ahead = (0, 1) if upward else (films + 1, -1)
-    gamma = [w * x for w, x in zip(stack.w, s)]
-    first = order[0]
-    theta = atan2(gamma[first], gamma[start])
-    r2 = gamma[first] ** 2 + gamma[start] ** 2
-    wron = stack.b[start] / (2 * s[start]) / r2
-    log_r2 = log(r2)
-    out = [_Edge(0.0, 0.0, 0.0)] * films
-    for j in order:
-        out[j - 1] = _Edge(theta, wron, log_r2)
-        if j == order[-1]:
-            break
-        tau = stack.tau[j - 1]
-        end, r2, integral, decay = _across(theta, s[j], tau, osc[j])
-        wron = (wron * decay + stack.b[j] * integral / gamma[j] ** 2) / r2
-        ratio = gamma[j + ahead] / gamma[j]
-        sn, cs = sin(end), cos(end)
-        theta = end + atan2((ratio - 1) * sn * cs, cs * cs + ratio * sn * sn)
-        stretch = (ratio * sn) ** 2 + cs * cs
-        wron /= stretch
-        log_r2 += log(r2 * stretch) - log(max(decay, _TINY))
+def _sweep(stack: _Stack, s: list[float], osc: list[bool], path: range, sized: bool = False) -> list[_Edge]:
+    """Shoot from one half-space over the layers of `path`, itself first: what `phase.sweep` does, at the entrance of
+    each. log R^2 only if `sized`."""
+    w, b, tau = stack.w, stack.b, stack.tau
+    start, film = path[0], path[1]
+    gamma, before = w[film] * s[film], w[start] * s[start]
+    r2 = gamma * gamma + before * before
+    r = sqrt(r2)
+    sn, cs = gamma / r, before / r
+    theta, wron = atan2(gamma, before), b[start] / (2 * s[start] * r2)
+    size = log(r2) if sized else 0.0
+    out = [_Edge(theta, sn, cs, wron, size)]
+    for following in path[2:]:
+        t, sj = tau[film - 1], s[film]
+        decay = 1.0
+        if osc[film]:
+            theta += sj * t
+            x, y = sin(theta), cos(theta)
+            wron += b[film] * (t - (x * y - sn * cs) / sj) / (2 * gamma * gamma)
+        elif t > 0:
+            grow, fall = (sn + cs) / 2, (sn - cs) / 2
+            decay = exp(-2 * sj * t)
+            ebb = fall * decay
+            # as in `phase`: without the cancellation where the field falls almost purely
+            theta -= atan2(2 * grow * fall * (1 - decay), 2 * (grow * grow + fall * ebb))
+            integral = (grow * grow + fall * ebb) * (1 - decay) / (2 * sj) + 2 * grow * ebb * t
+            x, y = grow + ebb, grow - ebb
+            wron = wron * decay + b[film] * max(integral, 0.0) / (gamma * gamma)
+        else:
+            x, y = sn, cs
+        new = w[following] * s[following]
+        ratio = new / gamma
+        theta += atan2((ratio - 1) * x * y, y * y + ratio * x * x)
+        x *= ratio
+        r2 = max(x * x + y * y, _TINY)
+        r = sqrt(r2)
+        sn, cs = x / r, y / r
+        wron /= r2
+        if sized:
+            size += log(r2) - log(max(decay, _TINY))
+        film, gamma = following, new
+        out.append(_Edge(theta, sn, cs, wron, size))
     return out
 
 
-def _across(theta: float, s: float, tau: float, oscillates: bool) -> tuple[float, float, float, float]:
-    """Cross a film: new angle, growth of R^2 and integral of (gamma psi)^2, both times the last number, the decay."""
-    if tau == 0:
-        return theta, 1.0, 0.0, 1.0
-    if oscillates:
-        end = theta + s * tau
-        return end, 1.0, tau / 2 - (sin(2 * end) - sin(2 * theta)) / (4 * s), 1.0
-    sn, cs = sin(theta), cos(theta)
-    grow, fall = (sn + cs) / 2, (sn - cs) / 2
-    decay = exp(-2 * s * tau)
-    end = theta + atan2((cs - sn) * (cs + sn) * (1 - decay), (sn + cs) ** 2 + decay * (cs - sn) ** 2)
-    r2 = max(2 * (grow**2 + (fall * decay) ** 2), _TINY)
-    integral = (grow**2 + fall**2 * decay) * (1 - decay) / (2 * s) + 2 * grow * fall * tau * decay
-    return end, r2, max(integral, 0.0), decay
-
-
-def _total_phase(stack: _Stack, q: float, at_cut_off: bool = False) -> tuple[float, float, int]:
-    """Phase in the flattest oscillating film, its slope in q, and which film that is: `phase.total_phase`."""
+def _total_phase(stack: _Stack, q: float, at_cut_off: bool = False, film: int = 0) -> tuple[float, float, int]:
+    """Phase in an oscillating film, its slope in q, and the number of that film: the one given, if the films that
+    oscillate lie side by side, else the flattest. See `phase.total_phase`."""
     s, osc = _wave_numbers(stack, q)
     if at_cut_off:
         for i in (0, -1):
             if stack.a[i] / stack.b[i] >= q:
                 s[i] = _NO_DECAY
-    up, down = _sweep(stack, s, osc, upward=True), _sweep(stack, s, osc, upward=False)
-    best, phase, least = -1, 0.0, inf
-    for j, tau in enumerate(stack.tau):
-        if not osc[j + 1] or tau == 0:
-            continue
-        w, b, sj = stack.w[j + 1], stack.b[j + 1], s[j + 1]
-        gamma = w * sj
-        one, two = up[j].theta, down[j].theta
-        slope = gamma * (up[j].wron + down[j].wron) + b / (2 * w * sj) * (
-            tau + (sin(2 * one) + sin(2 * two)) / (2 * sj)
-        )
-        if slope < least:
-            best, phase, least = j, one + sj * tau + two, slope
-    return phase, -max(least, _TINY), best
+    last = len(s) - 1
+    if film and osc[film] and not _parted(osc):
+        up = _sweep(stack, s, osc, range(0, film + 1))[-1]
+        down = _sweep(stack, s, osc, range(last, film - 1, -1))[-1]
+        return *_joined(stack, s, film, up, down), film
+    ups = _sweep(stack, s, osc, range(0, last))
+    downs = _sweep(stack, s, osc, range(last, 0, -1))[::-1]
+    best = (0.0, -inf, 0)
+    for j in range(1, last):
+        if osc[j] and stack.tau[j - 1] > 0:
+            phase, slope = _joined(stack, s, j, ups[j - 1], downs[j - 1])
+            if slope > best[1]:
+                best = (phase, slope, j)
+    return best
+
+
+def _parted(osc: list[bool]) -> bool:
+    """Whether films that do not oscillate lie between some that do."""
+    return sum(x and not y for x, y in zip(osc[1:], osc)) > 1
+
+
+def _joined(stack: _Stack, s: list[float], film: int, up: _Edge, down: _Edge) -> tuple[float, float]:
+    """Phase in a film and its slope in q."""
+    w, b, sj, tau = stack.w[film], stack.b[film], s[film], stack.tau[film - 1]
+    slope = w * sj * (up.wron + down.wron) + b / (2 * w * sj) * (tau + (up.sin * up.cos + down.sin * down.cos) / sj)
+    return up.theta + sj * tau + down.theta, -max(slope, _TINY)
 
 
 def _root(stack: _Stack, order: int) -> float:
@@ -229,11 +246,11 @@ def _root(stack: _Stack, order: int) -> float:
     x = target / phase
     strong = sqrt(span) * sum(stack.tau)
     phi = asin(min((strong * x + pi / 2 * sin(pi / 2 * x)) / (strong + pi / 2), 1.0))
-    before, rise_before = inf, 0.0
+    before, rise_before, film = inf, 0.0, 0
     for _ in range(_STEPS):
         sn, cs = sin(phi), cos(phi)
         q = min(low + span * cs * cs, high * (1 - 1e-15))
-        phase, slope, _best = _total_phase(stack, q)
+        phase, slope, film = _total_phase(stack, q, film=film)
         miss = phase - target
         if miss >= 0:
             top = phi
@@ -243,7 +260,8 @@ def _root(stack: _Stack, order: int) -> float:
         step = miss / rise if rise > 0 else inf
         ends = low + span * cos(top) ** 2, low + span * cos(bottom) ** 2
         # Steps that shrink by squares while the phase stays as steep: the next would be below rounding.
-        if abs(rise - rise_before) < 1e-2 * rise and abs(step) ** 3 < 1e-16 * before * before and phi < _STEEP:
+        even = abs(rise - rise_before) < 1e-2 * rise and phi < _STEEP and not _parted(_wave_numbers(stack, q)[1])
+        if even and abs(step) ** 3 < 1e-16 * before * before:
             return low + span * cos(phi - step) ** 2
         if abs(miss) <= _ROUNDING * target or ends[1] - ends[0] <= 4 * _ROUNDING * q:
             return min(max(q - miss / slope, ends[0]), ends[1])
@@ -390,9 +408,10 @@ def _field(stack: _Stack, q: float) -> _Integrals:
     """The field of any stack, the two sweeps joined in the film where the phase is flattest."""
     w, a, b, tau = stack
     s, osc = _wave_numbers(stack, q)
-    up, down = _sweep(stack, s, osc, upward=True), _sweep(stack, s, osc, upward=False)
-    gamma = [x * y for x, y in zip(w, s)]
     films = len(tau)
+    up = _sweep(stack, s, osc, range(0, films + 1), sized=True)
+    down = _sweep(stack, s, osc, range(films + 1, 0, -1), sized=True)[::-1]
+    gamma = [x * y for x, y in zip(w, s)]
     slopes = [
         gamma[j + 1] * (up[j].wron + down[j].wron) + tau[j] * b[j + 1] / (2 * gamma[j + 1])
         if osc[j + 1] and tau[j] > 0
@@ -406,10 +425,10 @@ def _field(stack: _Stack, q: float) -> _Integrals:
     for j in range(films):
         if j <= m:
             scale = exp((up[j].log_r2 - up[m].log_r2) / 2)
-            psi_l[j], v_l[j] = sin(up[j].theta) * scale / gamma[j + 1], cos(up[j].theta) * scale
+            psi_l[j], v_l[j] = up[j].sin * scale / gamma[j + 1], up[j].cos * scale
         if j > m:
             scale = exp((down[j].log_r2 - down[m].log_r2) / 2) * sign
-            psi_h[j], v_h[j] = sin(down[j].theta) * scale / gamma[j + 1], -cos(down[j].theta) * scale
+            psi_h[j], v_h[j] = down[j].sin * scale / gamma[j + 1], -down[j].cos * scale
     psi_h[:m], v_h[:m] = psi_l[1 : m + 1], v_l[1 : m + 1]
     psi_l[m + 1 :], v_l[m + 1 :] = psi_h[m:-1], v_h[m:-1]
     sn, cs = sin(s[m + 1] * tau[m]), cos(s[m + 1] * tau[m])
