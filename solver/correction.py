@@ -28,12 +28,14 @@ from .map_basis import Halves, basis, design_nodes, exponents, fit, fit_values
 from .map_nodes import NodeJob, NodePool, Progress, single
 from .map_window import ETCH, INDEX, SIDEWALL, THICKNESS, WAVELENGTH, WIDTH, MapWindow
 from .vector_mesh import lay_out
-from .vector_modes import FINE, expected_index, merged, side_index, vector_mode
+from .vector_modes import FINE, NoSuchModeError, expected_index, merged, side_index, vector_mode
 
 _HOLD_SEED = 7130
 _LEAST_HELD = 10
 # Of the guides of a window at least this share must have the mode.
 _LEAST_SHARE = 0.7
+# Share of the middle's binding that is taken for a corner which has lost the mode.
+_JUST_BOUND = 0.05
 # Guides evaluated at once: their polynomials stay in the processor's cache.
 _BLOCK = 256
 # Column of the wavelength among `_others`.
@@ -288,12 +290,25 @@ class _Solver:
         self.middle, self.weak = (window.section_at(p) for p in (_middle(window), window.weakest()))
         weak, middle = (merged(replace(s, n=without_substrate(s.n)[0]))[0] for s in (self.weak[0], self.middle[0]))
         beside = side_index(weak)
-        bound = vector_mode(weak, window.tm, window.order, rule=replace(FINE, step=1.2)).N.real
+        bound = self._weakest_bound(weak, middle, beside)
         # Laid out in the middle of the window, wide enough for its weakest mode.
         self.mesh = lay_out(middle, max(bound, beside + 1e-4), beside, FINE)
         self.pool = NodePool(self.mesh, workers, progress)
         method = float(eim_modes(self.weak[0], window.tm, window.order).N)
         self.shortfall = bound - method if np.isfinite(method) else 0.0
+
+    def _weakest_bound(self, weak: CrossSection, middle: CrossSection, beside: float) -> float:
+        """Effective index where the mode is bound most weakly; if that corner has lost it, a little above cut-off."""
+        window, rule = self.window, replace(FINE, step=1.2)
+        try:
+            return vector_mode(weak, window.tm, window.order, rule=rule).N.real
+        except NoSuchModeError:
+            pass
+        try:
+            inside = vector_mode(middle, window.tm, window.order, rule=rule).N.real
+        except NoSuchModeError:
+            raise MapError(0, 2) from None
+        return beside + _JUST_BOUND * max(inside - beside, 0.0)
 
     def data(self, xi: Array) -> _Data:
         window = self.window

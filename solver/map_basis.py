@@ -82,16 +82,19 @@ def design_nodes(dimension: int, degree: int, count: int, start: Array | None = 
         old = _rows(start, powers, degree).reshape(-1, powers.shape[0])
         information = information + old.T @ old
     inverse = np.linalg.inv(information)
-    carried = rows @ inverse  # (C, 1 + d, M)
+    gains = np.linalg.slogdet(np.eye(1 + dimension) + rows @ inverse @ rows.transpose(0, 2, 1))[1]
     chosen: list[int] = []
-    for _ in range(count):
-        gain = np.eye(1 + dimension) + carried @ rows.transpose(0, 2, 1)
-        size = np.linalg.slogdet(gain)[1]
-        size[chosen] = -np.inf
-        best = int(size.argmax())
+    while len(chosen) < count:
+        # Gains only fall as nodes are added: whoever still leads after a fresh look is the best of all.
+        best = int(gains.argmax())
+        carried = rows[best] @ inverse
+        gain = np.eye(1 + dimension) + carried @ rows[best].T
+        gains[best] = np.linalg.slogdet(gain)[1]
+        if gains[best] < gains.max():
+            continue
         chosen.append(best)
-        update = np.linalg.solve(gain[best], carried[best])
-        carried = carried - (carried @ rows[best].T) @ update
+        gains[best] = -np.inf
+        inverse -= carried.T @ np.linalg.solve(gain, carried)
     return candidates[chosen]
 
 

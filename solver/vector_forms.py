@@ -94,11 +94,11 @@ def space_on(mesh: GuideMesh, nodes: Array, degree: int) -> Space:
 
 
 def _first(f: Any) -> Array:
-    return np.asarray(f.value[0])
+    return np.asarray(f)[0]
 
 
 def _second(f: Any) -> Array:
-    return np.asarray(f.value[1])
+    return np.asarray(f)[1]
 
 
 def _curl(f: Any) -> Array:
@@ -106,7 +106,7 @@ def _curl(f: Any) -> Array:
 
 
 def _value(f: Any) -> Array:
-    return np.asarray(f.value)
+    return np.asarray(f)
 
 
 def _grad_x(f: Any) -> Array:
