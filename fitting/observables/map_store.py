@@ -97,15 +97,17 @@ def _solver_digest() -> str:
 def _read(path: Path, key: str, window: MapWindow) -> CorrectionMap | None:
     """The map in a file; None where there is none, or what is there is damaged or another's."""
     import zipfile
+    import zlib
 
     try:
-        with np.load(path, allow_pickle=False) as held:
+        # numpy leaves a file that it opened itself open when it turns out damaged
+        with path.open("rb") as file, np.load(file, allow_pickle=False) as held:
             text, table = str(held["meta"]), np.array(held["table"])
         meta = json.loads(text)
         if meta["key"] != key or meta["digest"] != _digest(meta["numbers"], table):
             return None
         return CorrectionMap(window=window, table=table, **_numbers(meta["numbers"]))
-    except (OSError, EOFError, ValueError, KeyError, TypeError, zipfile.BadZipFile):
+    except (OSError, EOFError, ValueError, KeyError, TypeError, NotImplementedError, zipfile.BadZipFile, zlib.error):
         return None
 
 
