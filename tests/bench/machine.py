@@ -10,7 +10,7 @@ from importlib.metadata import version
 
 
 def describe() -> str:
-    names = ("numpy", "scipy", "lmfit", "openpyxl", "layerlot")
+    names = ("numpy", "scipy", "scikit-fem", "lmfit", "openpyxl", "layerlot")
     versions = ", ".join(f"{n} {version(n)}" for n in names)
     return f"{_processor()}, {os.cpu_count()} cores\nPython {platform.python_version()}, {versions}"
 
