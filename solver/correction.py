@@ -1,72 +1,48 @@
-"""Correction map: what the effective index method lacks of the vector reference, as a smooth function.
+"""Corrected modes: the effective index method plus a map of what it lacks of the vector reference.
 
-    build_map(window)                     solves the reference at chosen nodes and fits the difference
-    corrected_modes(section, a_map)       effective index method plus map: value, all derivatives, stated error
+    layerlot.solver.map_build.build_map(window)     solves the reference at chosen nodes and fits the difference
+    corrected_modes(section, a_map)                 value, all derivatives, stated error
 
-The difference and its slopes along the window's axes are fitted by Chebyshev polynomials of total degree; the degree is
-raised until held-back nodes are met to the goal or the cap is reached. Slopes with respect to everything else (other
-indices, other thicknesses, fixed axes) are fitted too, to first order about their nominal values. All slopes come from
-the same solve as the value, see `vector_modes`.
-
-The stated error: the largest miss at the held-back nodes and what mesh and box leave in the reference, as standard
-uncertainties added in squares.
+The stated error of a map: the largest miss at held-back nodes and what mesh and box leave in the reference, as standard
+uncertainties added in squares; in a bend the error of the bend's own correction comes on top.
 """
 
 from __future__ import annotations
 
-from collections.abc import Sequence
-from dataclasses import dataclass, fields, replace
+from dataclasses import dataclass
 from functools import cached_property
 
 import numpy as np
 from numpy.typing import ArrayLike
 
-from .cross_section import CrossSection, GuideFlag, GuideModes, without_substrate
+from .cross_section import BoolArray, CrossSection, GuideFlag, GuideModes, IntArray
 from .guide import eim_modes
 from .layers import Array
-from .map_basis import Halves, basis, design_nodes, exponents, fit, fit_values
-from .map_nodes import NodeJob, NodePool, Progress, single
-from .map_window import ETCH, INDEX, SIDEWALL, THICKNESS, WAVELENGTH, WIDTH, MapWindow
-from .vector_mesh import lay_out
-from .vector_modes import FINE, NoSuchModeError, expected_index, merged, side_index, vector_mode
+from .map_basis import Halves
+from .map_terms import FILMS, WAVE, along_quantities, offsets
+from .map_window import MapWindow
 
-_HOLD_SEED = 7130
-_LEAST_HELD = 10
-# Of the guides of a window at least this share must have the mode.
-_LEAST_SHARE = 0.7
-# Share of the middle's binding that is taken for a corner which has lost the mode.
-_JUST_BOUND = 0.05
 # Guides evaluated at once: their polynomials stay in the processor's cache.
 _BLOCK = 256
-# Column of the wavelength among `_others`.
-_WAVE = 3
 
 
-class MapError(RuntimeError):
-    """No map can be made: too few nodes of the window have the mode. found, wanted: numbers of nodes."""
+@dataclass(frozen=True)
+class BendRatio:
+    """What the shift of a bend has to be multiplied by. table (1, H1, H2): the ratio over the window, of total degree
+    `degree`; error: standard uncertainty of the ratio; radius_um: of the bends that it was found at."""
 
-    def __init__(self, found: int, wanted: int) -> None:
-        self.found, self.wanted = found, wanted
-        super().__init__(f"only {found} of {wanted} guides of the window have this mode; narrow the window")
-
-
-@dataclass(frozen=True, slots=True)
-class MapGoal:
-    """When to stop. index, group: error of the effective and the group index to reach at the held-back nodes; nodes,
-    degree: caps."""
-
-    index: float = 2e-5
-    group: float = 5e-4
-    nodes: int = 420
-    degree: int = 9
+    degree: int
+    table: Array
+    error: float
+    radius_um: float
 
 
 @dataclass(frozen=True)
 class CorrectionMap:
     """degree: total, of the correction; table (1 + P, H1, H2): the correction and its slopes with respect to the P
-    quantities of `_others`, see `map_basis.Halves`. error, group_error: stated, see the module's text; held_error,
-    reference_error: (effective index, group index) of each part; nodes: solved, held back, without mode; met: whether
-    the goal was reached."""
+    quantities of `map_terms` that are no axes, see `map_basis.Halves`. error, group_error: stated, see above;
+    held_error, reference_error: (effective index, group index) of each part; nodes: solved, held back, without mode;
+    met: whether the goal was reached; bend: None where the map serves straight guides."""
 
     window: MapWindow
     degree: int
@@ -77,108 +53,96 @@ class CorrectionMap:
     reference_error: tuple[float, float]
     nodes: tuple[int, int, int]
     met: bool
+    bend: BendRatio | None = None
 
     @cached_property
     def halves(self) -> Halves:
         return Halves(len(self.window.active), self.degree)
 
-
-@dataclass(frozen=True)
-class _Data:
-    """Differences at nodes: xi (B, d), value (B), slope (B, d) in unit coordinates, others (B, P)."""
-
-    xi: Array
-    value: Array
-    slope: Array
-    others: Array
-
-    def take(self, rows: slice) -> _Data:
-        return _Data(self.xi[rows], self.value[rows], self.slope[rows], self.others[rows])
-
-    def join(self, more: _Data) -> _Data:
-        pairs = zip((self.xi, self.value, self.slope, self.others), (more.xi, more.value, more.slope, more.others))
-        return _Data(*(np.concatenate(p) for p in pairs))
-
-
-def build_map(
-    window: MapWindow, goal: MapGoal | None = None, workers: int | None = None, progress: Progress | None = None
-) -> CorrectionMap:
-    """Solve, fit, check, and refine. Raises MapError where the window holds too few guides with the mode."""
-    target = MapGoal() if goal is None else goal
-    solver = _Solver(window, workers, progress)
-    with solver.pool:
-        return _refined(window, target, solver)
-
-
-def _refined(window: MapWindow, goal: MapGoal, solver: _Solver) -> CorrectionMap:
-    dimension = len(window.active)
-    held = solver.data(_held_points(dimension))
-    degree = _first_degree(dimension)
-    data = solver.data(design_nodes(dimension, degree, _node_count(dimension, degree)))
-    while True:
-        made = _fitted(window, data, held, degree)
-        met = made.held_error[0] <= goal.index and made.held_error[1] <= goal.group
-        following = _node_count(dimension, degree + 1)
-        if met or degree >= goal.degree or following > goal.nodes or not dimension:
-            break
-        degree += 1
-        data = data.join(solver.data(design_nodes(dimension, degree, following - data.xi.shape[0], data.xi)))
-    reference = solver.reference_error()
-    error, group = (float(np.hypot(a, b)) for a, b in zip(made.held_error, reference))
-    return replace(
-        made, error=error, group_error=group, reference_error=reference, met=met,
-        nodes=(data.xi.shape[0], held.xi.shape[0], solver.missing),
-    )  # fmt: skip
+    @cached_property
+    def bend_halves(self) -> Halves:
+        return Halves(len(self.window.active), self.bend.degree if self.bend else 0)
 
 
 def corrected_modes(section: CrossSection, a_map: CorrectionMap, radius_um: ArrayLike | None = None) -> GuideModes:
-    """Modes of a batch of guides (...), of the polarisation and lateral order of the map. Beyond the window the
-    correction is carried on as a straight line, flagged. radius_um: (...) bend radius, None or inf for straight."""
-    plain = eim_modes(section, a_map.window.tm, a_map.window.order, radius_um)
+    """Modes of a batch of guides (...), of the polarisation and lateral order of the map.
+
+    radius_um: (...) of a bend's centre line, None or infinite for straight guides. Beyond the window the correction is
+    carried on as a straight line, flagged.
+    """
+    window, shape = a_map.window, section.shape
+    modes = eim_modes(section, window.tm, window.order)
     flat = section.flat()
-    change = np.concatenate([_change(a_map, _rows(flat, k)) for k in range(0, flat.width_um.size, _BLOCK)])
-    return _added(plain, a_map, section.shape, change)
+    radius = np.broadcast_to(np.inf if radius_um is None else np.asarray(radius_um, dtype=float), shape).reshape(-1)
+    blocks = [_change(a_map, _rows(flat, k)) for k in range(0, flat.width_um.size, _BLOCK)]
+    change, outside, ratio = (np.concatenate(parts) for parts in zip(*blocks))
+    values = _values(modes, change.shape[1]) + change
+    error, group_error = np.full(radius.size, a_map.error), np.full(radius.size, a_map.group_error)
+    flags: IntArray = modes.flags.reshape(-1) | np.where(outside, int(GuideFlag.OUTSIDE_MAP), 0)
+    if np.isfinite(radius).any():
+        bent = eim_modes(section, window.tm, window.order, radius_um)
+        shift = _values(bent, change.shape[1]) - _values(modes, change.shape[1])
+        own = a_map.bend.error if a_map.bend else 1.0
+        lam = section.wavelength_um.reshape(-1)
+        error = np.hypot(error, own * np.abs(shift[:, 0]))
+        group_error = np.hypot(group_error, own * np.abs(shift[:, 0] - lam * shift[:, 1 + WAVE]))
+        values += ratio[:, :1] * shift
+        values[:, 1:] += ratio[:, 1:] * shift[:, :1]
+        flags |= bent.flags.reshape(-1)
+    if not a_map.met:
+        flags |= int(GuideFlag.MAP_GOAL_MISSED)
+    return _modes(values, flags, error, group_error, shape, window.t_um.size)
 
 
-def _change(a_map: CorrectionMap, section: CrossSection) -> Array:
-    """Correction of a flat batch (B): columns for the value, whether beyond the window, then slopes with respect to
-    width, etch depth, sidewall, wavelength at fixed indices, thicknesses and indices, in the order of `_others`."""
+def _change(a_map: CorrectionMap, section: CrossSection) -> tuple[Array, BoolArray, Array]:
+    """Of a flat batch (B): the correction and its slopes by quantity (B, 1 + P), whether it lies beyond the window (B),
+    and the ratio of a bend's shift with its slopes (B, 1 + P)."""
     window = a_map.window
-    nominal, slopes = window.nominal_index(section.wavelength_um)
+    nominal, index_slopes = window.nominal_index(section.wavelength_um)
     points = window.points_of(section, nominal)
     xi = window.to_unit(points)
     inner = np.clip(xi, -1.0, 1.0)
-    off = _offsets(window, section, points, nominal)
+    off = offsets(window, section, points, nominal)
     values, slope = a_map.halves.evaluate(a_map.table, inner, off if off.any() else None)
-    out = np.empty((xi.shape[0], 1 + values.shape[0]))
-    others = out[:, 2:]
-    others[:] = values[1:].T
-    out[:, 0] = values[0] + (others * off[:, 1:]).sum(axis=1) + (slope * (xi - inner)).sum(axis=1)
-    out[:, 1] = (np.abs(xi) > 1 + 1e-9).any(axis=1)
-    others[:, _as_columns(window)] = slope / window.half_extent()
-    if WAVELENGTH in window.active:
-        # The axis follows the nominal dispersion; the result holds the change at fixed indices.
-        others[:, _WAVE] -= (others[:, -nominal.shape[1] :] * slopes).sum(axis=1)
+    value = values[0] + (values[1:].T * off[:, 1:]).sum(axis=1) + (slope * (xi - inner)).sum(axis=1)
+    change = np.column_stack([value, along_quantities(window, slope, values[1:].T, index_slopes)])
+    ratio = np.zeros_like(change)
+    ratio[:, 0] = 1.0
+    if a_map.bend is not None:
+        (found,), slope = a_map.bend_halves.evaluate(a_map.bend.table, inner, None)
+        ratio[:, 0] = found + (slope * (xi - inner)).sum(axis=1)
+        ratio[:, 1:] = along_quantities(window, slope, ratio[:, 1:], index_slopes)
+    return change, np.asarray((np.abs(xi) > 1 + 1e-9).any(axis=1)), ratio
+
+
+def _values(m: GuideModes, count: int) -> Array:
+    """N and its slopes by quantity, (B, 1 + P) with P + 1 = count."""
+    out = np.empty((m.N.size, count))
+    single = (m.N, m.dwidth_per_um, m.detch_per_um, m.dsidewall_per_deg, m.dwavelength_per_um)
+    for k, x in enumerate(single):
+        out[:, k] = x.reshape(-1)
+    films = m.dt_per_um.shape[-1]
+    out[:, 1 + FILMS : 1 + FILMS + films] = m.dt_per_um.reshape(-1, films)
+    out[:, 1 + FILMS + films :] = m.dn.reshape(-1, films + 2)
     return out
 
 
-def _added(plain: GuideModes, a_map: CorrectionMap, shape: tuple[int, ...], change: Array) -> GuideModes:
-    """The method's modes with the correction added to value and derivatives."""
-    films = a_map.window.t_um.size
-    width, etch, wall, wave = (change[:, 2 + k].reshape(shape) for k in range(4))
-    flags = np.where(change[:, 1] > 0, int(GuideFlag.OUTSIDE_MAP), 0)
-    known = np.where(np.isfinite(plain.N), 1.0, np.nan)
+def _modes(
+    values: Array, flags: IntArray, error: Array, group_error: Array, shape: tuple[int, ...], films: int
+) -> GuideModes:
+    known = np.isfinite(values[:, 0])
+    N, width, etch, wall, wave = (values[:, k].reshape(shape) for k in range(5))
     return GuideModes(
-        N=plain.N + change[:, 0].reshape(shape),
-        dwidth_per_um=plain.dwidth_per_um + width,
-        dt_per_um=plain.dt_per_um + change[:, 6 : 6 + films].reshape(*shape, films),
-        detch_per_um=plain.detch_per_um + etch,
-        dsidewall_per_deg=plain.dsidewall_per_deg + wall,
-        dn=plain.dn + change[:, 6 + films :].reshape(*shape, films + 2),
-        dwavelength_per_um=plain.dwavelength_per_um + wave,
-        flags=plain.flags | flags.reshape(shape) | (0 if a_map.met else int(GuideFlag.MAP_GOAL_MISSED)),
-        error=a_map.error * known,
-        group_error=a_map.group_error * known,
+        N=N,
+        dwidth_per_um=width,
+        dt_per_um=values[:, 1 + FILMS : 1 + FILMS + films].reshape(*shape, films),
+        detch_per_um=etch,
+        dsidewall_per_deg=wall,
+        dn=values[:, 1 + FILMS + films :].reshape(*shape, films + 2),
+        dwavelength_per_um=wave,
+        flags=flags.reshape(shape),
+        error=np.where(known, error, np.nan).reshape(shape),
+        group_error=np.where(known, group_error, np.nan).reshape(shape),
     )
 
 
@@ -192,181 +156,3 @@ def _rows(section: CrossSection, start: int) -> CrossSection:
         section.n[rows], section.t_um[rows], section.core, section.width_um[rows], section.wavelength_um[rows],
         etch, section.sidewall_deg[rows],
     )  # fmt: skip
-
-
-def _others(window: MapWindow, modes: GuideModes) -> Array:
-    """Slopes (B, P) of modes with respect to width, etch depth, sidewall, wavelength, L-2 thicknesses and L indices;
-    zero where the quantity is an axis of the map."""
-    out = np.concatenate(
-        [
-            np.stack(
-                [modes.dwidth_per_um, modes.detch_per_um, modes.dsidewall_per_deg, modes.dwavelength_per_um], axis=-1
-            ),
-            modes.dt_per_um,
-            modes.dn,
-        ],
-        axis=-1,
-    )
-    out[:, _as_columns(window)] = 0.0
-    return out
-
-
-def _as_columns(window: MapWindow) -> list[int]:
-    """Columns of `others` that are axes of the map."""
-    films = window.t_um.size
-    column = {WIDTH: 0, ETCH: 1, SIDEWALL: 2, WAVELENGTH: 3, THICKNESS: 3 + window.core, INDEX: 4 + films + window.core}
-    return [column[k] for k in window.active]
-
-
-def _offsets(window: MapWindow, section: CrossSection, points: Array, nominal: Array) -> Array:
-    """How far (B, 1 + P) everything that is no axis lies from its nominal value, in the order of `_others`; the first
-    column is zero."""
-    core, films = window.core, window.t_um.size
-    from_middle = points - (window.low + window.high) / 2
-    out = np.zeros((points.shape[0], 5 + films + films + 2))
-    others = out[:, 1:]
-    others[:, 0], others[:, 1] = from_middle[:, WIDTH], 0.0 if window.full_etch else from_middle[:, ETCH]
-    others[:, 2], others[:, _WAVE] = from_middle[:, SIDEWALL], from_middle[:, WAVELENGTH]
-    others[:, 4 : 4 + films] = section.t_um - window.t_um
-    others[:, 3 + core] = from_middle[:, THICKNESS]
-    others[:, 4 + films :] = section.n - nominal
-    others[:, 4 + films + core] = from_middle[:, INDEX]
-    others[:, _as_columns(window)] = 0.0
-    return out
-
-
-def _first_degree(dimension: int) -> int:
-    return {0: 0, 1: 5, 2: 5, 3: 5, 4: 5, 5: 4, 6: 4}[dimension]
-
-
-def _node_count(dimension: int, degree: int) -> int:
-    """Nodes for a degree: each brings a value and a slope along every axis, half as many again as needed."""
-    terms = exponents(dimension, degree).shape[0]
-    return max(int(np.ceil(1.6 * terms / (1 + dimension))), 1)
-
-
-def _held_points(dimension: int) -> Array:
-    """Points (H, d) to check at, spread evenly over the window."""
-    if not dimension:
-        return np.zeros((1, 0))
-    from scipy.stats import qmc
-
-    count = _LEAST_HELD + 2 * dimension
-    return np.asarray(2 * qmc.Halton(dimension, seed=_HOLD_SEED).random(count) - 1)
-
-
-def _fitted(window: MapWindow, data: _Data, held: _Data, degree: int) -> CorrectionMap:
-    dimension = len(window.active)
-    powers = exponents(dimension, degree)
-    coefficients = fit(data.xi, data.value, data.slope, powers, degree)
-    lower = degree
-    while lower > 0 and exponents(dimension, lower).shape[0] > 0.6 * data.xi.shape[0]:
-        lower -= 1
-    few = exponents(dimension, lower)
-    rest = np.zeros((powers.shape[0], data.others.shape[1]))
-    rest[: few.shape[0]] = fit_values(data.xi, data.others, few)
-    table = Halves(dimension, degree).table(np.column_stack([coefficients, rest]), powers)
-    value, gradient = basis(held.xi, powers)
-    miss = float(np.abs(coefficients @ value - held.value).max())
-    missed = (miss, _group_miss(window, held, (coefficients @ gradient).T))
-    return CorrectionMap(window, degree, table, miss, missed[1], missed, (0.0, 0.0), (0, 0, 0), False)
-
-
-def _group_miss(window: MapWindow, held: _Data, slope: Array) -> float:
-    """Largest miss of the group index; without a wavelength axis slopes are known to first order only."""
-    if WAVELENGTH not in window.active:
-        return 0.0
-    k = window.active.index(WAVELENGTH)
-    wave = window.from_unit(held.xi)[:, WAVELENGTH]
-    off = (slope - held.slope)[:, k] / window.half_extent()[k]
-    return float(np.abs(off * wave).max())
-
-
-class _Solver:
-    """Differences between reference and method at points of one window, on one mesh."""
-
-    def __init__(self, window: MapWindow, workers: int | None, progress: Progress | None) -> None:
-        self.window, self.missing = window, 0
-        self.middle, self.weak = (window.section_at(p) for p in (_middle(window), window.weakest()))
-        weak, middle = (merged(replace(s, n=without_substrate(s.n)[0]))[0] for s in (self.weak[0], self.middle[0]))
-        beside = side_index(weak)
-        bound = self._weakest_bound(weak, middle, beside)
-        # Laid out in the middle of the window, wide enough for its weakest mode.
-        self.mesh = lay_out(middle, max(bound, beside + 1e-4), beside, FINE)
-        self.pool = NodePool(self.mesh, workers, progress)
-        method = float(eim_modes(self.weak[0], window.tm, window.order).N)
-        self.shortfall = bound - method if np.isfinite(method) else 0.0
-
-    def _weakest_bound(self, weak: CrossSection, middle: CrossSection, beside: float) -> float:
-        """Effective index where the mode is bound most weakly; if that corner has lost it, a little above cut-off."""
-        window, rule = self.window, replace(FINE, step=1.2)
-        try:
-            return vector_mode(weak, window.tm, window.order, rule=rule).N.real
-        except NoSuchModeError:
-            pass
-        try:
-            inside = vector_mode(middle, window.tm, window.order, rule=rule).N.real
-        except NoSuchModeError:
-            raise MapError(0, 2) from None
-        return beside + _JUST_BOUND * max(inside - beside, 0.0)
-
-    def data(self, xi: Array) -> _Data:
-        window = self.window
-        section, slopes = window.section_at(window.from_unit(xi))
-        plain = eim_modes(section, window.tm, window.order)
-        jobs = [self._job(single(section, k), float(plain.N[k])) for k in range(xi.shape[0])]
-        found = self.pool.solve(jobs)
-        known = [(k, m) for k, m in enumerate(found) if m is not None and np.isfinite(plain.N[k])]
-        self.missing += len(found) - len(known)
-        if len(known) < _LEAST_SHARE * len(found):
-            raise MapError(len(known), len(found))
-        rows = [k for k, _ in known]
-        return _difference(window, xi[rows], _stack([m for _, m in known]), _take(plain, rows), slopes[rows])
-
-    def _job(self, section: CrossSection, method: float) -> NodeJob:
-        near = method + 0.7 * self.shortfall if np.isfinite(method) else expected_index(section, self.window.tm, 0)
-        return NodeJob(section, self.window.tm, self.window.order, near)
-
-    def reference_error(self) -> tuple[float, float]:
-        """What the map's mesh and box leave of error in effective and group index: the change to a finer mesh in a
-        wider box, in the middle of the window and where the mode is bound most weakly; the larger one."""
-        window, worst = self.window, np.zeros(2)
-        finer = replace(FINE.finer(1.6), reach=1.5 * FINE.reach)
-        for section, slopes in (self.middle, self.weak):
-            near = float(eim_modes(section, window.tm, window.order).N) + self.shortfall
-            usual = vector_mode(section, window.tm, window.order, near=near, mesh=self.mesh).modes
-            better = vector_mode(section, window.tm, window.order, rule=finer).modes
-            groups = [float(m.group_index(section.wavelength_um, slopes)) for m in (usual, better)]
-            worst = np.maximum(worst, [abs(float(usual.N - better.N)), abs(groups[0] - groups[1])])
-        return float(worst[0]), float(worst[1])
-
-
-def _middle(window: MapWindow) -> Array:
-    return (window.low + window.high) / 2
-
-
-def _difference(window: MapWindow, xi: Array, vector: GuideModes, plain: GuideModes, slopes: Array) -> _Data:
-    axes = [_axis_slopes(window, m, slopes) for m in (vector, plain)]
-    return _Data(
-        xi, vector.N - plain.N, (axes[0] - axes[1]) * window.half_extent(),
-        _others(window, vector) - _others(window, plain),
-    )  # fmt: skip
-
-
-def _axis_slopes(window: MapWindow, m: GuideModes, slopes: Array) -> Array:
-    """Slopes (B, d) along the active axes."""
-    core = window.core
-    every = (
-        m.dwidth_per_um, m.dt_per_um[:, core - 1], m.detch_per_um, m.dsidewall_per_deg, m.dn[:, core],
-        m.slope_per_um(slopes),
-    )  # fmt: skip
-    return np.stack([every[k] for k in window.active], axis=-1) if window.active else np.zeros((m.N.size, 0))
-
-
-def _stack(modes: Sequence[GuideModes]) -> GuideModes:
-    names = [f.name for f in fields(GuideModes)]
-    return GuideModes(**{name: np.stack([getattr(m, name) for m in modes]) for name in names})
-
-
-def _take(modes: GuideModes, rows: list[int]) -> GuideModes:
-    return GuideModes(**{f.name: getattr(modes, f.name)[rows] for f in fields(GuideModes)})

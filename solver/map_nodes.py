@@ -11,6 +11,7 @@ from collections.abc import Callable, Iterator, Sequence
 from concurrent.futures import ProcessPoolExecutor
 from contextlib import contextmanager
 from dataclasses import dataclass
+from functools import partial
 from multiprocessing import get_context
 from typing import Any
 
@@ -28,12 +29,13 @@ _THREAD_VARIABLES = ("OMP_NUM_THREADS", "OPENBLAS_NUM_THREADS", "MKL_NUM_THREADS
 
 @dataclass(frozen=True)
 class NodeJob:
-    """One guide to solve (empty batch shape) and the effective index expected."""
+    """One guide to solve (empty batch shape), the effective index expected, and the radius of its bend, if any."""
 
     section: CrossSection
     tm: bool
     order: int
     near: float
+    radius_um: float | None = None
 
 
 def usable_cores() -> int:
@@ -42,14 +44,14 @@ def usable_cores() -> int:
 
 
 class NodePool:
-    """Solves jobs on one mesh; as a context manager it keeps its processes from batch to batch.
+    """Solves batches of jobs; as a context manager it keeps its processes from batch to batch.
 
     workers: processes, by default one a core; with one, and for small batches before any process has started, work is
     done at home. progress(what, done, all) is called as nodes are finished.
     """
 
-    def __init__(self, mesh: GuideMesh, workers: int | None = None, progress: Progress | None = None) -> None:
-        self.mesh, self.progress = mesh, progress
+    def __init__(self, workers: int | None = None, progress: Progress | None = None) -> None:
+        self.progress = progress
         self.workers = workers or usable_cores()
         self._pool: ProcessPoolExecutor | None = None
 
@@ -61,45 +63,33 @@ class NodePool:
             self._pool.shutdown(cancel_futures=True)
             self._pool = None
 
-    def solve(self, jobs: Sequence[NodeJob]) -> list[GuideModes | None]:
-        """Modes of all jobs, in their order; None where no such mode was found."""
+    def solve(self, jobs: Sequence[NodeJob], mesh: GuideMesh) -> list[GuideModes | None]:
+        """Modes of all jobs on one mesh, in their order; None where no such mode was found."""
         out: list[GuideModes | None] = []
-        for mode in self._results(jobs):
+        for mode in self._results(jobs, mesh):
             out.append(mode)
             if self.progress is not None:
                 self.progress("vector reference", len(out), len(jobs))
         return out
 
-    def _results(self, jobs: Sequence[NodeJob]) -> Iterator[GuideModes | None]:
+    def _results(self, jobs: Sequence[NodeJob], mesh: GuideMesh) -> Iterator[GuideModes | None]:
         if self.workers < 2 or (self._pool is None and len(jobs) < _WORTH_A_PROCESS):
-            return (_solve_one(job, self.mesh) for job in jobs)
+            return (_solve_one(job, mesh) for job in jobs)
         with _one_thread_each():
             if self._pool is None:
-                context = get_context("spawn")
-                self._pool = ProcessPoolExecutor(self.workers, context, initializer=_start, initargs=(self.mesh,))
+                self._pool = ProcessPoolExecutor(self.workers, get_context("spawn"))
             # Processes start as work is handed over, so the environment must hold until then.
-            return self._pool.map(_solve_here, jobs)
+            return self._pool.map(partial(_solve_one, mesh=mesh), jobs)
 
 
-class _Worker:
-    mesh: GuideMesh | None = None
-
-
-def _start(mesh: GuideMesh) -> None:
-    _Worker.mesh = mesh
-
-
-def _solve_here(job: NodeJob) -> GuideModes | None:
-    return _solve_one(job, _Worker.mesh)
-
-
-def _solve_one(job: NodeJob, mesh: GuideMesh | None) -> GuideModes | None:
+def _solve_one(job: NodeJob, mesh: GuideMesh) -> GuideModes | None:
     from .vector_modes import NoSuchModeError, vector_mode
 
     try:
-        return vector_mode(job.section, job.tm, job.order, near=job.near, mesh=mesh).modes
+        mode = vector_mode(job.section, job.tm, job.order, near=job.near, mesh=mesh, radius_um=job.radius_um)
     except NoSuchModeError:
         return None
+    return mode.modes
 
 
 @contextmanager

@@ -94,11 +94,11 @@ def space_on(mesh: GuideMesh, nodes: Array, degree: int) -> Space:
 
 
 def _first(f: Any) -> Array:
-    return np.asarray(f)[0]
+    return np.array(f[0])
 
 
 def _second(f: Any) -> Array:
-    return np.asarray(f)[1]
+    return np.array(f[1])
 
 
 def _curl(f: Any) -> Array:

@@ -114,7 +114,7 @@ def vector_mode(
                 slim, max(expected, beside + 1e-3), beside, replace(COARSE, step=max(COARSE.step, rule.step))
             )
             expected = _solve(slim, tm, order, rough, expected, 2, None, rule).N.real
-        limit = np.inf if radius_um is None else _ROOM * radius_um * max(expected / beside - 1, 0.0)
+        limit = np.inf if radius_um is None else bend_room_um(radius_um, expected, beside)
         mesh = lay_out(slim, expected, beside, rule, whole=radius_um is not None, side_limit_um=limit)
     mode = _solve(slim, tm, order, mesh, expected, degree, radius_um, rule, mapped)
     # Below a slab mode beside the guide the box only seems to hold the mode.
@@ -144,6 +144,11 @@ def vector_mode_with_error(
     error = abs(half.N.real - near) + abs(wide.N.real - near)
     group = abs(groups[1] - groups[0]) + abs(groups[2] - groups[0])
     return replace(mode, modes=replace(mode.modes, error=np.asarray(error), group_error=np.asarray(group)))
+
+
+def bend_room_um(radius_um: float, N: float, N_side: float) -> float:
+    """How far beside a bend the box may reach, in µm: further out light would outrun the mode."""
+    return _ROOM * radius_um * max(N / N_side - 1, 0.0)
 
 
 def expected_index(section: CrossSection, tm: bool, order: int) -> float:

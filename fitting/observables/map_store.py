@@ -12,21 +12,31 @@ import hashlib
 import json
 import os
 import tempfile
-from dataclasses import asdict
+from collections.abc import Callable
+from dataclasses import asdict, replace
 from functools import cache
 from importlib.metadata import version
 from importlib.resources import files
 from pathlib import Path
-from typing import Any
+from typing import Any, TypeVar
 
 import numpy as np
-from layerlot.solver.correction import CorrectionMap, MapGoal, build_map
+from layerlot.solver.correction import BendRatio, CorrectionMap
+from layerlot.solver.map_build import MapGoal, build_bend, build_map
 from layerlot.solver.map_nodes import Progress
 from layerlot.solver.map_window import MapWindow
 from layerlot.solver.vector_modes import FINE
 
+from ..records import Array
+
 FOLDER_VARIABLE = "LAYERLOT_CACHE"
 _FORMAT = 1
+# Fields that are kept beside the table.
+_KEPT: dict[type, tuple[str, ...]] = {
+    CorrectionMap: ("degree", "error", "group_error", "held_error", "reference_error", "nodes", "met"),
+    BendRatio: ("degree", "error", "radius_um"),
+}
+Made = TypeVar("Made", CorrectionMap, BendRatio)
 
 
 def cache_folder() -> Path:
@@ -39,43 +49,63 @@ def cache_folder() -> Path:
 
 
 def stored_map(
-    window: MapWindow, goal: MapGoal | None = None, workers: int | None = None, progress: Progress | None = None
+    window: MapWindow,
+    goal: MapGoal | None = None,
+    workers: int | None = None,
+    progress: Progress | None = None,
+    tightest_um: float | None = None,
 ) -> CorrectionMap:
-    """The map of a window: from the cache, or built and kept there. A cache that cannot be written is done without.
-    Raises MapError where no map can be made."""
+    """The map of a window: from the cache, or built and kept there. tightest_um: smallest bend radius in use, None or
+    infinite for straight guides alone. A cache that cannot be written is done without. Raises MapError where no map
+    can be made."""
+    target = MapGoal() if goal is None else goal
+    made = _stored(
+        _key(window, {"goal": asdict(target)}),
+        lambda: build_map(window, target, workers, progress),
+        lambda numbers, table: CorrectionMap(window=window, table=table, **numbers),
+    )
+    if tightest_um is None or not np.isfinite(tightest_um):
+        return made
+    bend = _stored(
+        _key(window, {"bend": tightest_um}),
+        lambda: build_bend(window, tightest_um, workers, progress),
+        lambda numbers, table: BendRatio(table=table, **numbers),
+    )
+    return replace(made, bend=bend)
+
+
+def _stored(key: str, build: Callable[[], Made], remake: Callable[[dict[str, Any], Array], Made]) -> Made:
+    """What the key stands for: from its file, or built and kept."""
     from filelock import FileLock
 
-    target = MapGoal() if goal is None else goal
-    key = _key(window, target)
     path = cache_folder() / f"map-{hashlib.sha256(key.encode()).hexdigest()[:32]}.npz"
-    found = _read(path, key, window)
+    found = _read(path, key)
     if found is not None:
-        return found
+        return remake(*found)
     try:
         path.parent.mkdir(parents=True, exist_ok=True)
         lock = FileLock(path.with_suffix(".lock"))
         lock.acquire()
     except OSError:
-        return build_map(window, target, workers, progress)
+        return build()
     try:
-        found = _read(path, key, window)  # another process may have been at it
-        if found is None:
-            found = build_map(window, target, workers, progress)
-            _write(path, key, found)
-        return found
+        found = _read(path, key)  # another process may have been at it
+        if found is not None:
+            return remake(*found)
+        made = build()
+        _write(path, key, made)
+        return made
     finally:
         lock.release()
 
 
-def _key(window: MapWindow, goal: MapGoal) -> str:
-    plain = {
-        name: value.tolist() if isinstance(value, np.ndarray) else value for name, value in asdict(window).items()
-    }
+def _key(window: MapWindow, purpose: dict[str, Any]) -> str:
+    plain = {name: value.tolist() if isinstance(value, np.ndarray) else value for name, value in asdict(window).items()}
     return json.dumps(
         {
             "format": _FORMAT,
             "window": plain,
-            "goal": asdict(goal),
+            **purpose,
             "mesh": asdict(FINE),
             "versions": [version("layerlot"), version("scikit-fem")],
             "solver": _solver_digest(),
@@ -94,8 +124,8 @@ def _solver_digest() -> str:
     return digest.hexdigest()
 
 
-def _read(path: Path, key: str, window: MapWindow) -> CorrectionMap | None:
-    """The map in a file; None where there is none, or what is there is damaged or another's."""
+def _read(path: Path, key: str) -> tuple[dict[str, Any], Array] | None:
+    """Numbers and table of a file; None where there is none, or what is there is damaged or another's."""
     import zipfile
     import zlib
 
@@ -106,24 +136,20 @@ def _read(path: Path, key: str, window: MapWindow) -> CorrectionMap | None:
         meta = json.loads(text)
         if meta["key"] != key or meta["digest"] != _digest(meta["numbers"], table):
             return None
-        return CorrectionMap(window=window, table=table, **_numbers(meta["numbers"]))
+        numbers = {name: tuple(x) if isinstance(x, list) else x for name, x in meta["numbers"].items()}
+        return numbers, table
     except (OSError, EOFError, ValueError, KeyError, TypeError, NotImplementedError, zipfile.BadZipFile, zlib.error):
         return None
 
 
-def _numbers(stored: dict[str, Any]) -> dict[str, Any]:
-    return {name: tuple(value) if isinstance(value, list) else value for name, value in stored.items()}
-
-
-def _digest(numbers: dict[str, Any], table: np.ndarray[Any, Any]) -> str:
+def _digest(numbers: dict[str, Any], table: Array) -> str:
     text = json.dumps([numbers, list(table.shape), str(table.dtype)], sort_keys=True)
     return hashlib.sha256(text.encode() + table.tobytes()).hexdigest()
 
 
-def _write(path: Path, key: str, made: CorrectionMap) -> None:
+def _write(path: Path, key: str, made: CorrectionMap | BendRatio) -> None:
     """Keep a map. A disk that is full or may not be written costs the cache, not the result."""
-    names = ("degree", "error", "group_error", "held_error", "reference_error", "nodes", "met")
-    numbers = json.loads(json.dumps({name: getattr(made, name) for name in names}))
+    numbers = json.loads(json.dumps({name: getattr(made, name) for name in _KEPT[type(made)]}))
     meta = json.dumps({"key": key, "digest": _digest(numbers, made.table), "numbers": numbers})
     try:
         handle, beside = tempfile.mkstemp(prefix=".map-", suffix=".npz", dir=path.parent)

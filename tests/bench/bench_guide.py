@@ -1,7 +1,7 @@
 """Guides: a correction map built, and the corrected model against one vector solve.
 
-Run by hand: `OMP_NUM_THREADS=1 python tests/bench/bench_guide.py`. The map is that of a silicon strip over width, thickness, core index and
-wavelength. A vector solve is what the map's nodes cost, derivatives included; it is timed in this process.
+Run by hand: `OMP_NUM_THREADS=1 python tests/bench/bench_guide.py`. The map is that of a silicon strip over width, thickness,
+core index and wavelength. A vector solve is what the nodes of the map cost, derivatives included; it is timed in this process.
 Exits 1 if a target is missed.
 """
 
@@ -13,8 +13,9 @@ from pathlib import Path
 
 sys.path.insert(0, str(Path(__file__).resolve().parents[2]))
 
-from layerlot.solver.correction import build_map, corrected_modes
+from layerlot.solver.correction import corrected_modes
 from layerlot.solver.guide import eim_modes
+from layerlot.solver.map_build import build_map
 from layerlot.solver.map_nodes import single
 from layerlot.solver.vector_modes import vector_mode
 

@@ -4,13 +4,14 @@ from __future__ import annotations
 
 import subprocess
 import sys
-from dataclasses import replace
+from dataclasses import asdict, replace
 from pathlib import Path
 
 import numpy as np
 import pytest
 from layerlot.fitting.observables import map_store
-from layerlot.solver.correction import CorrectionMap, MapGoal
+from layerlot.solver.correction import BendRatio, CorrectionMap
+from layerlot.solver.map_build import MapGoal
 from layerlot.solver.map_window import MapWindow, index_points_um, map_window
 
 
@@ -82,7 +83,7 @@ def test_a_damaged_file_is_rebuilt(builds, tmp_path, damage):
     content = path.read_bytes()
     if damage == "foreign":
         other = made(window(1.2))
-        map_store._write(path, map_store._key(window(1.2), MapGoal()), replace(other, error=0.5))
+        map_store._write(path, map_store._key(window(1.2), {"goal": asdict(MapGoal())}), replace(other, error=0.5))
     else:
         middle = content.index(b"table.npy") + 200
         path.write_bytes(
@@ -115,6 +116,23 @@ def test_a_folder_that_cannot_be_written_costs_only_the_cache(builds, monkeypatc
     (tmp_path / "file").write_text("in the way")
     monkeypatch.setenv(map_store.FOLDER_VARIABLE, str(tmp_path / "file" / "cache"))
     assert same(map_store.stored_map(window()), made(window()))
+
+
+def test_bends_are_kept_beside(builds, monkeypatch):
+    """The ratio for bends has a file of its own: the map is not built again for it, nor for another radius."""
+    radii: list[float] = []
+
+    def build(_: MapWindow, radius_um: float, *__: object) -> BendRatio:
+        radii.append(radius_um)
+        return BendRatio(1, np.full((1, 2, 1), 0.7), 0.01, radius_um)
+
+    monkeypatch.setattr(map_store, "build_bend", build)
+    assert map_store.stored_map(window()).bend is None
+    found = [map_store.stored_map(window(), tightest_um=radius).bend for radius in (10.0, 10.0, 20.0)]
+    assert len(builds) == 1 and radii == [10.0, 20.0]
+    assert found[0] is not None and found[1] is not None and found[0].error == found[1].error == 0.01
+    assert np.array_equal(found[0].table, found[1].table)
+    assert map_store.stored_map(window(), tightest_um=np.inf).bend is None
 
 
 def test_nothing_else_is_left_behind(builds, tmp_path):

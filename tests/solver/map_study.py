@@ -10,8 +10,9 @@ import time
 from dataclasses import dataclass
 
 import numpy as np
-from layerlot.solver.correction import CorrectionMap, build_map, corrected_modes
+from layerlot.solver.correction import CorrectionMap, corrected_modes
 from layerlot.solver.guide import eim_modes
+from layerlot.solver.map_build import build_map
 
 from tests.solver.map_windows import CASES, fresh_points, solve_points
 

@@ -10,7 +10,8 @@ from dataclasses import replace
 
 import numpy as np
 import pytest
-from layerlot.solver.correction import MapError, MapGoal, build_map, corrected_modes
+from layerlot.solver.correction import corrected_modes
+from layerlot.solver.map_build import MapError, MapGoal, build_map
 from layerlot.solver.cross_section import GuideFlag, GuideModes
 from layerlot.solver.guide import eim_modes
 from layerlot.solver.map_window import MapWindow, index_points_um, map_window
