@@ -7,15 +7,15 @@
 
 Vertical slabs first, through the guide and beside it, mode 0 of the guide's polarisation; then the lateral slab made of
 their effective indices, polarisation swapped: for quasi-TE the electric field lies along x, normal to the lateral
-interfaces, so that slab is TM (R. M. Knox, P. P. Toulios, Proc. Symp. Submillimeter Waves, 497 (1970), from memory; G. B.
-Hocker, W. K. Burns, Appl. Opt. 16, 113 (1977)). The method is in error by up to 0.1 in silicon wires: a start, and the
-base of the correction map, no result to fit with.
+interfaces, so that slab is TM (R. M. Knox, P. P. Toulios, Proc. Symp. Submillimeter Waves, 497 (1970); G. B. Hocker,
+W. K. Burns, Appl. Opt. 16, 113 (1977); both from memory). The method is in error by up to 0.1 in silicon wires: a
+start, and the base of the correction map, no result to fit with.
 """
 
 from __future__ import annotations
 
 import math
-from typing import NamedTuple
+from typing import Any, NamedTuple
 
 import numpy as np
 from numpy.typing import ArrayLike, NDArray
@@ -31,6 +31,7 @@ from .guide_columns import (
     across,
     anywhere,
     column,
+    column_index,
     exists,
     functions,
     larger,
@@ -39,7 +40,6 @@ from .guide_columns import (
     straight,
     where,
 )
-from .layers import Array
 
 __all__ = ["WALL_COLUMNS", "SideRule", "eim_modes"]
 
@@ -58,14 +58,15 @@ FEW = 32
 
 
 class Mode(NamedTuple):
-    """One mode with the fields of `GuideModes`; ddepth_per_um by the etch depth at fixed thickness."""
+    """One mode with the fields of `GuideModes`, dn and dt_per_um lists over layers; ddepth_per_um by the etch depth at
+    fixed thickness."""
 
     N: Value
     dwidth_per_um: Value
-    dt_per_um: list[Value]
+    dt_per_um: Value
     ddepth_per_um: Value
     dsidewall_per_deg: Value
-    dn: list[Value]
+    dn: Value
     dwavelength_per_um: Value
     flags: Value
 
@@ -79,15 +80,19 @@ def eim_modes(
 ) -> GuideModes:
     """Mode of lateral order `order` of each guide, with all derivatives in closed form.
 
-    section: batch of guides (...). tm: False for quasi-TE, True for quasi-TM; order: number of lateral nodes; radius_um:
-    of a bend's centre line, None or infinite for a straight guide (see `bend`). All three (...), broadcast with the
-    batch. side_rule: see `SideRule`.
+    section: batch of guides (...). tm: False for quasi-TE, True for quasi-TM; order: number of lateral nodes;
+    radius_um: of a bend's centre line, None or infinite for a straight guide (see `bend`). All three (...), broadcast
+    with the batch. side_rule: what stands for the side's index where the side guides nothing, which sets the flag
+    SIDES_GUIDE_NOTHING; under FILL and WEIGHTED the index jumps where the side comes to guide (see `SideRule`).
 
-    Returns `GuideModes` of the broadcast shape: N and derivatives are NaN where there is no mode, with the flag that says
-    why; `error` and `group_error` are NaN throughout, for the method cannot tell its own error. Where a substrate of
-    high index was replaced by its buffer, its derivative is zero. Sloped walls are `WALL_COLUMNS` columns each; at
-    sidewall_deg = 90 the model's slope by the angle jumps, and the mean of both sides is given. FLAG SECOND_MODE asks
-    for lateral modes of vertical order 0 alone. A mode at or below the index of a half-space counts as not guided.
+    Returns `GuideModes` of the broadcast shape. N and its derivatives are NaN where there is no mode, with the flag
+    that says why; a mode at or below the index of a half-space counts as none. `error` and `group_error` are NaN: the
+    method cannot tell its own error. Where a substrate of high index was replaced by the buffer above it, so is its
+    derivative. Flag SECOND_MODE asks for lateral modes of vertical order 0 alone.
+
+    A sloped wall is cut into `WALL_COLUMNS` columns. N has a kink at sidewall_deg = 90, where it falls to both sides
+    by up to 1e-3 per degree in silicon: the slope given there is an estimate of the mean of both.
+
     Raises ValueError for a radius that is not positive.
     """
     radius = np.inf if radius_um is None else np.asarray(radius_um, dtype=float)
@@ -98,22 +103,24 @@ def eim_modes(
     n, dropped = without_substrate(section.n)
     layers = n.shape[-1]
 
-    def flat(x: ArrayLike, *tail: int) -> Array:
-        return np.broadcast_to(x, (*shape, *tail)).reshape(size, *tail)
+    def flat(x: ArrayLike, *tail: int) -> Any:
+        y = np.asarray(x)
+        full = (*shape, *tail)
+        return (y if y.shape == full else np.broadcast_to(y, full)).reshape(size, *tail)
 
     parts = [
         flat(n, layers), flat(section.t_um, layers - 2), flat(section.width_um), flat(section.wavelength_um),
         flat(section.depth_um), flat(section.sidewall_deg), flat(np.asarray(tm, dtype=bool)), flat(order),
         flat(radius), flat(dropped),
     ]  # fmt: skip
-    if size <= FEW:
-        rows = [_one(section.core, side_rule, *row) for row in zip(*(x.tolist() for x in parts))]
-        mode = Mode(*(np.array(x) for x in zip(*rows)))
+    if 0 < size <= FEW:
+        each = zip(*(x.tolist() for x in parts))
+        mode = Mode(*map(np.array, zip(*(_one(section.core, side_rule, *row) for row in each))))
     else:
         n_, t = (list(np.ascontiguousarray(x.T)) for x in parts[:2])
         many = _one(section.core, side_rule, n_, t, *parts[2:])
-        mode = Mode(*(np.stack(x, axis=-1) if isinstance(x, list) else x for x in many))
-    return _shaped(mode, section, shape, flat(dropped))
+        mode = many._replace(dn=np.stack(many.dn, axis=-1), dt_per_um=np.stack(many.dt_per_um, axis=-1))
+    return _shaped(mode, section, shape, parts[-1])
 
 
 def _shaped(mode: Mode, section: CrossSection, shape: tuple[int, ...], dropped: BoolArray) -> GuideModes:
@@ -125,8 +132,8 @@ def _shaped(mode: Mode, section: CrossSection, shape: tuple[int, ...], dropped: 
         ddepth = ddepth * 0.0
     nan = np.full(shape, np.nan)
     return GuideModes(
-        N.reshape(shape), dwidth.reshape(shape), dt.reshape(*shape, -1), ddepth.reshape(shape),
-        dsidewall.reshape(shape), dn.reshape(*shape, -1), dwavelength.reshape(shape), flags.reshape(shape), nan, nan,
+        N.reshape(shape), dwidth.reshape(shape), dt.reshape(*shape, dt.shape[-1]), ddepth.reshape(shape),
+        dsidewall.reshape(shape), dn.reshape(*shape, dn.shape[-1]), dwavelength.reshape(shape), flags.reshape(shape), nan, nan,
     )  # fmt: skip
 
 
@@ -161,7 +168,7 @@ def _one(
     flags = 0
     if anywhere(radius_um < math.inf):
         lateral, flags = bent(lateral, index, width_um, wall, wavelength_um, order, negated(tm), radius_um)
-    N = where(held & (lateral.N > larger(n[0], n[-1])), lateral.N, math.nan)
+    N = where(held & (larger(n[0], n[-1]) < lateral.N), lateral.N, math.nan)
     dwall = lateral.dwall_per_um
     if anywhere(upright):
         dwall = where(upright, _upright_slope(g, rule, centre.N, side.N, lateral), dwall)
@@ -170,9 +177,10 @@ def _one(
 
 
 def _upright_slope(g: Guide, rule: SideRule, centre: Value, side: Value, lateral: Lateral) -> Value:
-    """dN/d(extent of a wall) at vertical walls, where the model's two slopes differ: their mean. Simpson's rule over the
-    shares gone, at whose ends the columns under a wide foot and under an undercut are the same."""
-    foot, under = column(g, 0.5, rule).N, column(g, 0.5, rule, where(g.sidewall_deg == 90, True, True)).N
+    """dN/d(extent of a wall) at vertical walls, where the model's two slopes differ: their mean. Simpson's rule over
+    the shares gone, at whose ends the columns under a wide foot and under an undercut are the same; in a bend, too, by
+    the fields of a straight guide."""
+    foot, under = column_index(g, 0.5, rule), column_index(g, 0.5, rule, g.sidewall_deg > 0)
     q = lateral.N * lateral.N
     edge = side * side
 
@@ -195,8 +203,9 @@ def _flags(
     flags = flags | where(centre.guided & negated(found), int(GuideFlag.NO_LATERAL_MODE), 0)
     flags = flags | where(side.guided, 0, int(GuideFlag.SIDES_GUIDE_NOTHING))
     flags = flags | where(N * N - beside < NEAR * (core - beside), int(GuideFlag.NEAR_CUT_OFF), 0)
-    lateral = modes_above(*across(index, g.width_um, wall_um), g.wavelength_um, negated(g.tm), 0.0)
-    flags = flags | where(found & (g.order == 0) & (lateral > 1), int(GuideFlag.SECOND_MODE), 0)
+    flags = flags | where(
+        found & (g.order == 0) & (_lateral_modes(g, index, wall_um) > 1), int(GuideFlag.SECOND_MODE), 0
+    )
     t = list(g.t_um)
     t[g.core - 1] = larger(t[g.core - 1] - g.depth_um, 0.0)
     if g.core < len(t):
@@ -207,6 +216,14 @@ def _flags(
     decay = f.sqrt(where(found & dropped, N * N - g.n[0] * g.n[0], 0.0)) * (2 * math.pi / g.wavelength_um)
     leaks = found & dropped & (2 * f.exp(-2 * decay * g.t_um[0]) > LEAK)
     return flags | where(leaks, int(GuideFlag.LEAKS_DOWN), 0)
+
+
+def _lateral_modes(g: Guide, index: list[Value], wall_um: Value) -> Value:
+    """As many modes of the lateral slab as this number counts, rounded up."""
+    if len(index) > 2:
+        return modes_above(*across(index, g.width_um, wall_um), g.wavelength_um, negated(g.tm), 0.0)
+    fall = larger(index[0] * index[0] - index[1] * index[1], 0.0)
+    return 2 * g.width_um / g.wavelength_um * functions(fall).sqrt(fall)
 
 
 def _chain(g: Guide, cols: list[Column], lateral: Lateral, N: Value, dwall: Value, flags: Value) -> Mode:

@@ -16,7 +16,7 @@ import numpy as np
 from .fields import mode_derivatives
 from .layers import flatten
 from .phase import total_phase
-from .scalar_slab import SlabMode, slab_mode, slab_phase
+from .scalar_slab import SlabMode, slab_index, slab_mode, slab_phase
 from .slab import mode_index
 
 Value = Any  # float or array (B); bool or array of bool where it is a condition
@@ -96,14 +96,16 @@ def slab(
     order: Value,
     tm: Value,
     n_normal: Sequence[Value] | None = None,
+    near: Value = math.nan,
 ) -> SlabMode:
     """One mode of a slab with its derivatives, as `scalar_slab.slab_mode`, of floats or arrays (B)."""
     if isinstance(wavelength_um, float):
-        return slab_mode(list(n), list(t_um), wavelength_um, order, tm, None if n_normal is None else list(n_normal))
+        uniaxial = None if n_normal is None else list(n_normal)
+        return slab_mode(list(n), list(t_um), wavelength_um, order, tm, uniaxial, near)
     stack = _stacked(n, wavelength_um), _stacked(t_um, wavelength_um), wavelength_um
     normal = None if n_normal is None else _stacked(n_normal, wavelength_um)
-    N = mode_index(*stack, order, tm, normal)
-    d = mode_derivatives(N, *stack, tm, normal)
+    N: Any = mode_index(*stack, order, tm, normal)
+    d: Any = mode_derivatives(N, *stack, tm, normal)
     return SlabMode(N, list(d.dn.T), list(d.dt_per_um.T), d.dwavelength_per_um, list(d.dn_normal.T))
 
 
@@ -146,7 +148,19 @@ def column(g: Guide, share: float, rule: SideRule, undercut: Value = False) -> C
     ruled = _ruled(g, share, rule, undercut)
     if isinstance(found.guided, bool):
         return ruled
-    return Column(*(_either(found.guided, x, y) for x, y in zip(found[:-1], ruled[:-1])), found.guided)
+    N, dn, dt, ddepth, dwavelength = (_either(found.guided, x, y) for x, y in zip(found[:-1], ruled[:-1]))
+    return Column(N, dn, dt, ddepth, dwavelength, found.guided)
+
+
+def column_index(g: Guide, share: float, rule: SideRule, undercut: Value = False) -> Value:
+    """The index of a column alone, see `column`."""
+    n, t, _ = _split_column(g, share, undercut) if anywhere(undercut) else _plain_column(g, share)
+    if isinstance(g.wavelength_um, float):
+        N: Value = slab_index(list(n), t, g.wavelength_um, 0, g.tm)
+    else:
+        N = mode_index(_stacked(n, g.wavelength_um), _stacked(t, g.wavelength_um), g.wavelength_um, 0, g.tm)
+    guided = exists(N)
+    return where(guided, N, _ruled(g, share, rule, undercut).N) if anywhere(negated(guided)) else N
 
 
 def _either(condition: Value, yes: Value, no: Value) -> Any:
@@ -185,6 +199,8 @@ def _split_column(g: Guide, share: float, undercut: Value) -> tuple[list[Value],
 
 def _ruled(g: Guide, share: float, rule: SideRule, undercut: Value) -> Column:
     """What the rule says of a column that guides nothing."""
+    if rule is SideRule.WEIGHTED:
+        return _weighted(g, share, undercut)
     zero = g.wavelength_um * 0.0
     dn, dt = [zero] * len(g.n), [zero] * len(g.t_um)
     if rule is SideRule.FILL:
@@ -194,6 +210,41 @@ def _ruled(g: Guide, share: float, rule: SideRule, undercut: Value) -> Column:
     dn[0] = where(below, zero + 1.0, zero)
     dn[-1] = where(below, zero, zero + 1.0)
     return Column(where(below, g.n[0], g.n[-1]), dn, dt, zero, zero, False)
+
+
+def _weighted(g: Guide, share: float, undercut: Value) -> Column:
+    """The rule WEIGHTED; its derivatives by differences of fourth order, forwards because layers may have no thickness:
+    good to 1e-8."""
+    k, gone = g.core, share * g.depth_um
+    by_depth = where(undercut, -1.0, -share), share, where(undercut, 1 - share, 0.0)
+    lower = larger(g.t_um[k - 1] + by_depth[0] * g.depth_um, 0.0)
+    t = [*g.t_um[: k - 1], lower, gone, by_depth[2] * g.depth_um, *g.t_um[k:]]
+
+    def mean(n: list[Value], t: list[Value]) -> Value:
+        through = [*n[: k + 1], n[k], n[k], *n[k + 1 :]]
+        beside = [*n[: k + 1], n[k + 1], n[k], *n[k + 1 :]]
+        mode = slab(through, t, g.wavelength_um, g.order * 0, g.tm, through)
+        # the derivatives are confinement integrals: psi^2 of each layer but for a common factor
+        psi2 = [where(g.tm, y * m**3, x / m) for x, y, m in zip(mode.dn, mode.dn_normal, through)]
+        return functions(mode.N).sqrt(sum(x * m * m for x, m in zip(psi2, beside)) / sum(psi2))
+
+    N = mean(g.n, t)
+
+    def slope(n: list[Value], t: list[Value], values: list[Value], j: int, step: Value) -> Value:
+        """Of the mean by values[j], values being n or t."""
+        old, out = values[j], -25 * N
+        for times, weight in ((1, 48), (2, -36), (3, 16), (4, -3)):
+            values[j] = old + times * step
+            out = out + weight * mean(n, t)
+        values[j] = old
+        return out / (12 * step)
+
+    n = list(g.n)
+    dn = [slope(n, t, n, j, 1e-4) for j in range(len(n))]
+    dt = [slope(n, t, t, j, 1e-4 * g.wavelength_um) for j in range(len(t))]
+    ddepth = sum(x * y for x, y in zip(by_depth, dt[k - 1 : k + 2]))
+    dwavelength = -sum(x * y for x, y in zip(dt, t)) / g.wavelength_um  # only t / wavelength counts
+    return Column(N, dn, dt[:k] + dt[k + 2 :], ddepth, dwavelength, False)
 
 
 class Lateral(NamedTuple):

@@ -60,21 +60,34 @@ class _Edge(NamedTuple):
 
 
 def slab_mode(
-    n: list[float], t_um: list[float], wavelength_um: float, order: int, tm: bool, n_normal: list[float] | None = None
+    n: list[float],
+    t_um: list[float],
+    wavelength_um: float,
+    order: int,
+    tm: bool,
+    n_normal: list[float] | None = None,
+    near: float = nan,
 ) -> SlabMode:
     """Mode `order` of one stack with its derivatives; arguments and accuracy as for `slab.mode_index`, unchecked.
 
     n: L indices from the substrate up; t_um: L-2 thicknesses, zero allowed; n_normal: indices along the normal where
-    layers are uniaxial (TM).
+    layers are uniaxial (TM); near: an index to start from, which saves steps.
     """
     stack = _coefficients(n, t_um, wavelength_um, tm, n_normal)
     first, last = _core(stack)
-    N = sqrt(_root(_trimmed(stack, first, last), order)) if first <= last else nan
+    N = sqrt(_root(_trimmed(stack, first, last), order, near)) if first <= last else nan
     if isnan(N):
         return SlabMode(nan, [nan] * len(n), [nan] * len(t_um), nan, [nan] * len(n))
     q = N * N
     field = _whole_field(stack, q, first, last)
     return _derivatives(stack, q, field, n, n_normal, wavelength_um, tm)
+
+
+def slab_index(n: list[float], t_um: list[float], wavelength_um: float, order: int, tm: bool) -> float:
+    """The effective index alone, as by `slab_mode`."""
+    stack = _coefficients(n, t_um, wavelength_um, tm, None)
+    first, last = _core(stack)
+    return sqrt(_root(_trimmed(stack, first, last), order)) if first <= last else nan
 
 
 def slab_phase(
@@ -201,8 +214,7 @@ def _total_phase(stack: _Stack, q: float, at_cut_off: bool = False, film: int = 
     s, osc = _wave_numbers(stack, q)
     if at_cut_off:
         for i in (0, -1):
-            if stack.a[i] / stack.b[i] >= q:
-                s[i] = _NO_DECAY
+            s[i] = _NO_DECAY if stack.a[i] / stack.b[i] >= q else s[i]
     last = len(s) - 1
     if film and osc[film] and not _parted(osc):
         up = _sweep(stack, s, osc, range(0, film + 1))[-1]
@@ -231,39 +243,35 @@ def _joined(stack: _Stack, s: list[float], film: int, up: _Edge, down: _Edge) ->
     return up.theta + sj * tau + down.theta, -max(slope, _TINY)
 
 
-def _root(stack: _Stack, order: int) -> float:
+def _root(stack: _Stack, order: int, near: float = nan) -> float:
     """q of mode `order`, NaN where it is not guided."""
     low, high = _range(stack)
     if not high > low or order < 0:
         return nan
     if len(stack.tau) == 1:
         return _three_layer_root(stack, order, low, high)
-    phase = _total_phase(stack, low, True)[0]
-    if not phase / pi - 1 > order:
-        return nan
     target, span = (order + 1) * pi, high - low
     bottom, top = 0.0, pi / 2  # of phi: the phase rises with it
-    x = target / phase
-    strong = sqrt(span) * sum(stack.tau)
-    phi = asin(min((strong * x + pi / 2 * sin(pi / 2 * x)) / (strong + pi / 2), 1.0))
+    phi = _start(stack, target, low, span) if isnan(near) else asin(sqrt(min(max((high - near**2) / span, 0.0), 1.0)))
+    if isnan(phi):
+        return nan
     before, rise_before, film = inf, 0.0, 0
     for _ in range(_STEPS):
         sn, cs = sin(phi), cos(phi)
         q = min(low + span * cs * cs, high * (1 - 1e-15))
         phase, slope, film = _total_phase(stack, q, film=film)
         miss = phase - target
-        if miss >= 0:
-            top = phi
-        if miss <= 0:
-            bottom = phi
+        bottom, top = (phi if miss <= 0 else bottom), (phi if miss >= 0 else top)
         rise = -slope * 2 * span * sn * cs
         step = miss / rise if rise > 0 else inf
         ends = low + span * cos(top) ** 2, low + span * cos(bottom) ** 2
         # Steps that shrink by squares while the phase stays as steep: the next would be below rounding.
-        even = abs(rise - rise_before) < 1e-2 * rise and phi < _STEEP and not _parted(_wave_numbers(stack, q)[1])
-        if even and abs(step) ** 3 < 1e-16 * before * before:
+        even = abs(rise - rise_before) < 1e-2 * rise and phi < _STEEP
+        if even and abs(step) ** 3 < 1e-16 * before * before and not _parted(_wave_numbers(stack, q)[1]):
             return low + span * cos(phi - step) ** 2
         if abs(miss) <= _ROUNDING * target or ends[1] - ends[0] <= 4 * _ROUNDING * q:
+            if not isnan(near):
+                return _root(stack, order)  # the start was none: does the mode exist?
             return min(max(q - miss / slope, ends[0]), ends[1])
         # Half way between nearly degenerate modes Newton's step vanishes far from either: a step below rounding counts
         # only once the far side of the root has been seen.
@@ -274,6 +282,17 @@ def _root(stack: _Stack, order: int) -> float:
         new = phi - step
         phi = new if bottom <= new <= top and abs(step) <= (top - bottom) / 2 else (bottom + top) / 2
     raise ArithmeticError(f"mode search did not converge for mode {order} of the stack {stack}")
+
+
+def _start(stack: _Stack, target: float, low: float, span: float) -> float:
+    """A first phi from the phase at cut-off, NaN where that falls short of the target: no mode."""
+    phase = _total_phase(stack, low, True)[0]
+    # as `slab._roots` decides it
+    if not phase / pi > target / pi:
+        return nan
+    x = target / phase
+    strong = sqrt(span) * sum(stack.tau)
+    return asin(min((strong * x + pi / 2 * sin(pi / 2 * x)) / (strong + pi / 2), 1.0))
 
 
 def _three_layer_root(stack: _Stack, order: int, low: float, high: float) -> float:
@@ -310,10 +329,7 @@ def _three_layer_root(stack: _Stack, order: int, low: float, high: float) -> flo
         newton = f / slope
         half = newton * bend / (2 * slope)
         step = newton / max(1 - half, 0.3)
-        if f > 0:
-            top = phi
-        else:
-            bottom = phi
+        bottom, top = (bottom, phi) if f > 0 else (phi, top)
         new = phi - step
         inside = bottom < new < top
         if (inside and abs(step) * (abs(step) + 2 * abs(half)) ** 2 <= 1e-16) or abs(step) <= 4e-16:
@@ -363,12 +379,8 @@ def _whole_field(stack: _Stack, q: float, first: int, last: int) -> _Integrals:
         return _Integrals(psi2, wpsi1, h, ends)
     low = _tail(stack, q, 0, range(first - 1, 0, -1), ends[0])
     high = _tail(stack, q, films + 1, range(last + 1, films + 1), ends[1])
-    return _Integrals(
-        low[0][::-1] + psi2[1:-1] + high[0],
-        low[1][::-1] + wpsi1[1:-1] + high[1],
-        low[2][::-1] + h + high[2],
-        ends,
-    )
+    inside = psi2[1:-1], wpsi1[1:-1], h
+    return _Integrals(*(x[::-1] + y + z for x, y, z in zip(low, inside, high)), ends)
 
 
 def _tail(
