@@ -133,7 +133,8 @@ def _shaped(mode: Mode, section: CrossSection, shape: tuple[int, ...], dropped: 
     nan = np.full(shape, np.nan)
     return GuideModes(
         N.reshape(shape), dwidth.reshape(shape), dt.reshape(*shape, dt.shape[-1]), ddepth.reshape(shape),
-        dsidewall.reshape(shape), dn.reshape(*shape, dn.shape[-1]), dwavelength.reshape(shape), flags.reshape(shape), nan, nan,
+        dsidewall.reshape(shape), dn.reshape(*shape, dn.shape[-1]), dwavelength.reshape(shape),
+        flags.reshape(shape), nan, nan,
     )  # fmt: skip
 
 

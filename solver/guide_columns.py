@@ -158,9 +158,22 @@ def column_index(g: Guide, share: float, rule: SideRule, undercut: Value = False
     if isinstance(g.wavelength_um, float):
         N: Value = slab_index(list(n), t, g.wavelength_um, 0, g.tm)
     else:
+        n, t = _slim(n, t)
         N = mode_index(_stacked(n, g.wavelength_um), _stacked(t, g.wavelength_um), g.wavelength_um, 0, g.tm)
     guided = exists(N)
     return where(guided, N, _ruled(g, share, rule, undercut).N) if anywhere(negated(guided)) else N
+
+
+def _slim(n: list[Value], t_um: list[Value]) -> tuple[list[Value], list[Value]]:
+    """The same stacks, of arrays, without films that nowhere have a thickness or everywhere the index of the half-space
+    next to them; one film is left in any case. Three layers are ten times as fast as four."""
+    films = [(x, y) for x, y in zip(n[1:-1], t_um) if np.any(y > 0)]
+    while len(films) > 1 and np.all(films[0][0] == n[0]):
+        films = films[1:]
+    while len(films) > 1 and np.all(films[-1][0] == n[-1]):
+        films = films[:-1]
+    films = films or [(n[1], t_um[0])]
+    return [n[0], *(x for x, _ in films), n[-1]], [y for _, y in films]
 
 
 def _either(condition: Value, yes: Value, no: Value) -> Any:

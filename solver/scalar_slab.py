@@ -379,8 +379,8 @@ def _whole_field(stack: _Stack, q: float, first: int, last: int) -> _Integrals:
         return _Integrals(psi2, wpsi1, h, ends)
     low = _tail(stack, q, 0, range(first - 1, 0, -1), ends[0])
     high = _tail(stack, q, films + 1, range(last + 1, films + 1), ends[1])
-    inside = psi2[1:-1], wpsi1[1:-1], h
-    return _Integrals(*(x[::-1] + y + z for x, y, z in zip(low, inside, high)), ends)
+    psi2, wpsi1, h = (x[::-1] + y + z for x, y, z in zip(low, (psi2[1:-1], wpsi1[1:-1], h), high))
+    return _Integrals(psi2, wpsi1, h, ends)
 
 
 def _tail(
