@@ -24,6 +24,25 @@ FLAGS: dict[str, str] = {
     "not_converged": "The fit did not settle. Check the readings, or narrow the fit windows.",
     "shared_out_of_prior": "A shared quantity came out far from its stated value. Check the prism constants.",
     "interrupted": "The run was stopped before this site was fitted.",
+    "guide_no_vertical_mode": "The layers through the guide hold no mode: the core is too thin, its index too low, "
+    "or the polarisation is cut off. Check thickness and index of the core, and the wavelength.",
+    "guide_no_lateral_mode": "The guide is too narrow, or etched too little, to hold this lateral mode. Check the drawn "
+    "width, the width bias and the etch depth.",
+    "guide_leaks_sideways": "The mode lies below a mode of the other polarisation in the layers beside the guide "
+    "and loses light into them, the more so in bends. Etch deeper, or use the other polarisation.",
+    "guide_leaks_down": "The substrate of high index lies so near that it takes light out of the mode and moves it; the "
+    "number is for a substrate without that effect. A thicker buffer layer helps.",
+    "guide_bend_radiates": "The bend loses light outwards, and its effective index is less exact. Use a larger radius, "
+    "or a guide that confines more.",
+    "guide_bend_out_of_range": "The bend is too tight for the model: no number is given. Use a larger radius.",
+    "guide_near_cut_off": "The mode is so weakly bound that a small change of the guide loses it; its numbers depend "
+    "strongly on every dimension. Use a wider or thicker guide.",
+    "guide_outside_map": "The guide lies beyond the range that its correction was found for; the correction is carried "
+    "on straight there, with an error larger than stated. Widen the windows in the stack file.",
+    "guide_map_error": "The correction to the reference model stopped short of its goal; the stated uncertainty of the "
+    "model says by how much. Narrow the windows in the stack file.",
+    "guide_uniaxial": "The guide model knows isotropic layers only, and a layer of this stack has an index_normal: no "
+    "number is given. Leave index_normal out to predict the guide.",
 }
 
 NOTES: dict[str, str] = {
@@ -31,6 +50,11 @@ NOTES: dict[str, str] = {
     "no_redundancy": "There are as many unknowns as readings: the fit cannot be checked by its residuals.",
     "not_parabolic": "An interval is not symmetric about its value; it was found from the likelihood itself.",
     "orders_found": "Mode numbers were missing and have been found from the readings.",
+    "guide_sides_guide_nothing": "The layers beside the guide hold no mode, as with most guides that are etched "
+    "through; the larger index of substrate and cover stands in for theirs.",
+    "guide_second_mode": "The guide also holds a higher lateral mode of this polarisation; it may show in spectra.",
+    "guide_plain_model": "Plain effective index method: its own error is not known, and in silicon wires may be 0.1, "
+    "far more than dimensions vary. Good for a first look, not for a dimension.",
 }
 
 
