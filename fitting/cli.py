@@ -107,7 +107,7 @@ def inspect(files: tuple[Path, ...]) -> int:
     return _refuse(imported.faults)
 
 
-@layerlot.command(cls=_ManyNumbers, short_help="Predict film modes and coupling angles.")
+@layerlot.command(cls=_ManyNumbers, short_help="Predict film modes, coupling angles and guides.")
 @click.argument("stack", type=_FILE)
 @click.option(
     "--wavelength-nm",
@@ -117,11 +117,24 @@ def inspect(files: tuple[Path, ...]) -> int:
 )
 @click.option("--pol", type=click.Choice(["TE", "TM"]), default=None, help="One polarisation; both if left out.")
 @click.option("--json", "as_json", is_flag=True, help="One JSON document on standard output.")
-def predict(stack: Path, wavelength_nm: tuple[float, ...], pol: str | None, as_json: bool) -> int:
-    """Film modes, coupling angles and sensitivities of a STACK file whose quantities have values or starts."""
+@click.option("--plain-eim", is_flag=True, help="Guides by the effective index method alone: quick and rough.")
+@click.option("--field", type=_FILE, default=None, help="Draw the guides' mode fields into this svg, png or pdf file.")
+def predict(
+    stack: Path,
+    wavelength_nm: tuple[float, ...],
+    pol: str | None,
+    as_json: bool,
+    plain_eim: bool,
+    field: Path | None,
+) -> int:
+    """Film modes, coupling angles, guides and sensitivities of a STACK file whose quantities have values or starts.
+
+    Guides are those of the file's structures, each at its own polarisation: effective and group index, and what width,
+    thickness, etch, wall, index and temperature do to them and to a resonance.
+    """
     from .command_predict import run_predict
 
-    return run_predict(stack, wavelength_nm, pol, as_json)
+    return run_predict(stack, wavelength_nm, pol, as_json, plain_eim, field)
 
 
 @layerlot.command(short_help="Fit film index and thickness of every site.")

@@ -1,197 +1,157 @@
-"""The body of `predict`: film modes, coupling angles and sensitivities of a stack as it is stated."""
+"""The body of `predict`: film modes and guides of a stack as it is stated."""
 
 from __future__ import annotations
 
 import json
-from collections.abc import Sequence
-from dataclasses import dataclass
+import sys
+from collections.abc import Iterator, Sequence
+from contextlib import contextmanager
 from pathlib import Path
-from typing import Any
+from typing import TYPE_CHECKING
 
 import click
-import numpy as np
-from layerlot.solver.film_modes import film_modes, is_leaky
-from layerlot.solver.leaky import loss_dB_per_cm
 from layerlot.solver.materials import Table
-from layerlot.solver.prism import coupling_angle_deg
-from layerlot.solver.slab import mode_count
 
-from .observables.parameters import Context, Layout, build_layout
-from .records import Array, Fault, InputRefused, IntArray, Place
-from .stack import IndexSpec, Stack, conventions, load_stack
-from .stack_schema import WAVELENGTH_NM
+from .observables.guide import GuideContext, guide_parts
+from .predict_faults import guide_faults, start_faults, wavelength_faults
+from .predict_film import film_record, predict_film
+from .predict_guide import GuidePrediction, Progress, guide_contexts, guide_record, predict_guide
+from .predict_text import prediction_text
+from .records import Fault, InputRefused, Place
+from .stack import Stack, load_stack
 
-# The red helium-neon line, on which most prism couplers are built (common practice, no source).
-USUAL_NM = 632.8
-# Leaky modes are numbered, not counted: orders are asked for up to here.
-_LEAKY_ORDERS = 64
+if TYPE_CHECKING:
+    from .report.guide_field import FieldPanel
 
-
-@dataclass(frozen=True)
-class FilmMode:
-    """One mode; n_eff relative to the stack's index reference. angle_deg: None without a prism or where the prism
-    cannot reach the mode. d_index, d_thickness_per_nm: change of n_eff, by film from the substrate up."""
-
-    wavelength_nm: float
-    pol: str
-    order: int
-    n_eff: float
-    loss_dB_per_cm: float
-    angle_deg: float | None
-    d_index: tuple[float, ...]
-    d_thickness_per_nm: tuple[float, ...]
+# The red helium-neon line, on which most prism couplers are built, and the middle of the band that guides on chips are
+# mostly made for (both common practice, no source).
+USUAL_NM, USUAL_GUIDE_NM = 632.8, 1550.0
 
 
-def run_predict(stack_file: Path, wavelengths_nm: Sequence[float], pol: str | None, as_json: bool) -> int:
-    """Print the prediction; returns the exit status. Raises InputRefused with every reason why there is none."""
+def run_predict(
+    stack_file: Path,
+    wavelengths_nm: Sequence[float],
+    pol: str | None,
+    as_json: bool,
+    plain: bool = False,
+    field: Path | None = None,
+) -> int:
+    """Print the prediction, and draw the guides' fields if asked; returns the exit status, 1 where a guide is flagged.
+    plain: guides by the effective index method alone. Raises InputRefused with every reason why there is none."""
     stack = load_stack(stack_file)
-    asked = list(dict.fromkeys(wavelengths_nm)) or _default_nm(stack)
-    modes = predict_film(stack, asked, [pol] if pol else ["TE", "TM"])
+    asked = list(dict.fromkeys(wavelengths_nm))
+    film_nm = asked or _default_nm(stack, films=True)
+    guide_nm = (asked or _default_nm(stack, films=False)) if stack.structures else []
+    faults = [*start_faults(stack), *guide_faults(stack), *wavelength_faults(stack, film_nm, guide_nm)]
+    if field is not None:
+        faults += _field_faults(stack, field)
+    if faults:
+        raise InputRefused(faults)
+    pols = [pol] if pol else ["TE", "TM"]
+    modes = predict_film(stack, film_nm, pols)
+    contexts = guide_contexts(stack, guide_nm, pols)
+    with _progress() as progress:
+        guides = predict_guide(stack, contexts, plain, progress)
+    drawn = "" if field is None else _draw(stack, contexts, guides, plain, field)
     if as_json:
-        click.echo(json.dumps({"film_modes": [_record(m, stack) for m in modes], "guide": []}, allow_nan=False))
+        document = {"film_modes": [film_record(m, stack) for m in modes], "guide": [guide_record(g) for g in guides]}
+        click.echo(json.dumps(document, allow_nan=False))
     else:
-        click.echo(_text(stack, modes, asked, bool(wavelengths_nm)), nl=False)
-    return 0
+        click.echo(prediction_text(stack, modes, guides, film_nm, guide_nm, bool(wavelengths_nm)), nl=False)
+    if drawn:
+        click.echo(drawn, err=as_json)
+    return 1 if any(g.flagged for g in guides) else 0
 
 
-def _default_nm(stack: Stack) -> list[float]:
-    """The wavelengths at which the file's tables state an index, else the usual line."""
+def _default_nm(stack: Stack, films: bool) -> list[float]:
+    """The wavelengths at which the file's tables state an index, else the usual line: of prism couplers for films,
+    unless the file speaks of guides and no prism."""
     specs = [s for layer in stack.layers for s in (layer.index, layer.index_normal)]
     if stack.prism is not None:
         specs += [stack.prism.index_TE, stack.prism.index_TM]
     tables = [s.material.formula for s in specs if s and s.name is None and s.material]
-    return sorted({round(w * 1000, 6) for t in tables if isinstance(t, Table) for w in t.wavelength_um}) or [USUAL_NM]
+    stated = sorted({round(w * 1000, 6) for t in tables if isinstance(t, Table) for w in t.wavelength_um})
+    prism_line = films and (stack.prism is not None or not stack.structures)
+    return stated or [USUAL_NM if prism_line else USUAL_GUIDE_NM]
 
 
-def predict_film(stack: Stack, wavelengths_nm: Sequence[float], pols: Sequence[str]) -> list[FilmMode]:
-    """All film modes at wavelengths (nm, as typed), by wavelength, polarisation and order. Raises InputRefused where a
-    fitted quantity has no start or a material is unknown at a wavelength."""
-    faults = [*_without_start(stack), *_wavelength_faults(stack, wavelengths_nm)]
-    if faults:
-        raise InputRefused(faults)
-    contexts = [Context(nm / 1000, pol == "TM", None) for nm in wavelengths_nm for pol in pols]
-    layout = build_layout(stack, contexts)
-    nominal = np.where(layout.fitted, layout.starts(), layout.prior()[0])
-    return [mode for c in range(len(contexts)) for mode in _modes_at(layout, nominal, c)]
+def _field_faults(stack: Stack, field: Path) -> list[Fault]:
+    from .report.guide_field import SUFFIXES
 
-
-def _modes_at(layout: Layout, theta: Array, c: int) -> list[FilmMode]:
-    """Modes of one wavelength and polarisation."""
-    n = layout.n_fixed[c] + layout.n_map[c] @ theta
-    normal = layout.normal_fixed[c] + layout.normal_map[c] @ theta if layout.uniaxial else None
-    t, lam, tm = layout.t_fixed + layout.t_map @ theta, layout.working_um[c], layout.tm[c]
-    count = _LEAKY_ORDERS if is_leaky(n) else int(mode_count(n, t, lam, tm, normal))
-    order: IntArray = np.arange(count)
-    if not count:
-        return []
-    rows = np.broadcast_to(n, (count, n.size))
-    along = None if normal is None else np.broadcast_to(normal, rows.shape)
-    found = film_modes(rows, np.broadcast_to(t, (count, t.size)), np.full(count, lam), order, np.full(count, tm), along)
-    loss = loss_dB_per_cm(found.N + 1j * found.loss_index, lam)
-    angle = np.full(count, np.nan)
-    if layout.has_prism:
-        n_p = layout.prism_fixed[c] + layout.prism_map[c] @ theta
-        base, zero = layout.base_fixed + layout.base_map @ theta, layout.zero_fixed + layout.zero_map @ theta
-        angle = layout.angle_sign * coupling_angle_deg(found.N, n_p, base) + zero
-    return [
-        FilmMode(
-            wavelength_nm=round(layout.contexts[c].wavelength_um * 1000, 6),
-            pol="TM" if tm else "TE",
-            order=int(m),
-            n_eff=float(found.N[m]),
-            loss_dB_per_cm=float(loss[m]) if found.loss_index[m] else 0.0,
-            angle_deg=float(angle[m]) if np.isfinite(angle[m]) else None,
-            d_index=tuple(float(x) for x in (found.dn + found.dn_normal)[m, 1:-1]),
-            d_thickness_per_nm=tuple(float(x) / 1000 for x in found.dt_per_um[m]),
-        )
-        for m in order
-        if np.isfinite(found.N[m])
-    ]
-
-
-def _without_start(stack: Stack) -> list[Fault]:
-    """A fault for each quantity to be fitted that states no value to predict from."""
-    places = []
-    for number, layer in enumerate(stack.layers, start=1):
-        where = f"layer[{number}]"
-        for key, spec in (("index", layer.index), ("index_normal", layer.index_normal)):
-            if spec is not None and _lacks_start(spec):
-                places.append(f"{where}.{key}")
-        if layer.thickness_um is not None and layer.thickness_um.nominal is None:
-            places.append(f"{where}.thickness_nm")
-    prism = stack.prism
-    if prism is not None:
-        keys = (
-            {"index": prism.index_TE} if prism.one_index else {"index_TE": prism.index_TE, "index_TM": prism.index_TM}
-        )
-        places += [f"prism.{key}" for key, spec in keys.items() if _lacks_start(spec)]
-        plain = {"base_angle_deg": prism.base_angle_deg, "angle_offset_deg": prism.angle_offset_deg}
-        places += [f"prism.{key}" for key, q in plain.items() if q.nominal is None]
-    required, remedy = "a prediction needs a value", "add start = ... beside fit"
-    return [Fault(Place(stack.file, column=p), "to be fitted, without a start", required, remedy) for p in places]
-
-
-def _lacks_start(spec: IndexSpec) -> bool:
-    return any(q is not None and q.nominal is None for q in (spec.quantity, spec.shift))
-
-
-def _wavelength_faults(stack: Stack, wavelengths_nm: Sequence[float]) -> list[Fault]:
     faults = []
-    low, high = WAVELENGTH_NM
-    for nm in wavelengths_nm:
-        place, was = Place("command line", column="--wavelength-nm"), f"{nm:g} nm"
-        if not low <= nm <= high:
-            remedy = f"if µm was meant, write {nm * 1000:g}" if 0.1 <= nm <= 50 else "correct the wavelength"
-            faults.append(Fault(place, was, f"wavelengths are in nm, {low:g} to {high:g}", remedy))
-            continue
-        try:
-            build_layout(stack, [Context(nm / 1000, False, None), Context(nm / 1000, True, None)])
-        except ValueError as error:
-            remedy = "ask for another wavelength, or give that index as a number or a table"
-            faults.append(Fault(place, was, str(error), remedy))
+    place = Place("command line", column="--field")
+    if not stack.structures:
+        required, remedy = "a field needs [guide] and [[structure]]", "see layerlot template guide"
+        faults.append(Fault(place, f"no structure in {stack.file}", required, remedy))
+    if field.suffix.lower() not in SUFFIXES:
+        was = f"a file ending in {field.suffix or 'nothing'}"
+        required = f"a field is drawn as {', '.join(SUFFIXES[:-1])} or {SUFFIXES[-1]}"
+        faults.append(Fault(place, was, required, f"name it with {SUFFIXES[0]}"))
+    if field.is_dir() or not field.absolute().parent.is_dir():
+        was = "a folder" if field.is_dir() else f"no folder {field.absolute().parent}"
+        faults.append(Fault(place, was, "a file in an existing folder is required", "check the path"))
     return faults
 
 
-def _record(m: FilmMode, stack: Stack) -> dict[str, Any]:
-    out: dict[str, Any] = {
-        "wavelength_nm": m.wavelength_nm, "pol": m.pol, "order": m.order, "n_eff": m.n_eff,
-        "loss_dB_per_cm": m.loss_dB_per_cm,
-    }  # fmt: skip
-    if stack.prism is not None:
-        out["angle_deg"] = m.angle_deg
-    films = zip(stack.layers[1:-1], m.d_index, m.d_thickness_per_nm, strict=True)
-    out["sensitivity"] = {film.name: {"index": dn, "thickness_per_nm": dt} for film, dn, dt in films}
-    return out
+def _draw(
+    stack: Stack, contexts: Sequence[GuideContext], guides: Sequence[GuidePrediction], plain: bool, field: Path
+) -> str:
+    """Draw the fields of the guides that hold a mode, like cross-sections once; returns the line that says where."""
+    from .report.guide_field import draw_fields
+
+    panels = _panels(stack, contexts, guides)
+    if not panels:
+        return "No field was drawn: no guide holds a mode."
+    try:
+        draw_fields(panels, field, plain)
+    except OSError as error:
+        was = f"cannot be written ({error.strerror or error})"
+        raise InputRefused(
+            [Fault(Place(str(field)), was, "room and rights are required", "name another file")]
+        ) from None
+    return f"Field: {field}"
 
 
-def _text(stack: Stack, modes: Sequence[FilmMode], asked: Sequence[float], chosen: bool) -> str:
-    lines = [stack.title, ""]
-    if not chosen:
-        lines += [f"No wavelength was asked for: {', '.join(f'{nm:g}' for nm in asked)} nm taken.", ""]
-    films = [layer.name for layer in stack.layers[1:-1]]
-    head = ["wavelength/nm", "mode", "n_eff", "loss/(dB/cm)"] + (["angle/deg"] if stack.prism else [])
-    head += [text for film in films for text in (f"per index, {film}", f"per nm, {film}")]
-    lines += _columns([head, *(_row(m, stack.prism is not None) for m in modes)])
-    empty = [nm for nm in asked if not any(m.wavelength_nm == round(nm, 6) for m in modes)]
-    lines += [f"No mode at {nm:g} nm: the film is too thin, or its index too low." for nm in empty]
-    lines += ["", "per index, per nm: change of n_eff with a film's index, and with its thickness."]
-    if any(m.loss_dB_per_cm > 0 for m in modes):
-        lines.append("Modes with a loss leak into a half-space of higher index.")
-    if stack.prism is not None:
-        if any(m.angle_deg is None for m in modes):
-            lines.append("angle -: the prism cannot reach the mode.")
-        lines.append("Laser light at the prism: follow local laser-safety rules and licensed practice.")
-    return "\n".join([*lines, "", *conventions(stack)]) + "\n"
+def _panels(stack: Stack, contexts: Sequence[GuideContext], guides: Sequence[GuidePrediction]) -> list[FieldPanel]:
+    """A panel for each cross-section, wavelength and polarisation, named after all structures that have it."""
+    from layerlot.solver.map_nodes import single
+
+    from .report.guide_field import FieldPanel
+
+    found = [(c, g) for c, g in zip(contexts, guides, strict=True) if g.n_eff is not None]
+    alike: dict[tuple[float, float, str], list[int]] = {}
+    for k, (c, g) in enumerate(found):
+        alike.setdefault((c.structure.drawn_width_um, g.wavelength_nm, g.pol), []).append(k)
+    if not alike:
+        return []
+    section = guide_parts(stack, [c for c, _ in found]).section
+    panels = []
+    for (_, nm, pol), rows in alike.items():
+        context, guide = found[rows[0]]
+        names = ", ".join(found[k][0].structure.name for k in rows)
+        assert guide.n_eff is not None
+        N = float(stack.index_inside(guide.n_eff, section.wavelength_um[rows[0]]))
+        title = f"{names}: {pol}{guide.order} at {nm:g} nm, n_eff {guide.n_eff:.4f}"
+        panels.append(FieldPanel(title, single(section, rows[0]), context.tm, context.order, N))
+    return panels
 
 
-def _row(m: FilmMode, has_prism: bool) -> list[str]:
-    row = [f"{m.wavelength_nm:g}", f"{m.pol}{m.order}", f"{m.n_eff:.6f}", f"{m.loss_dB_per_cm:.3g}"]
-    if has_prism:
-        row.append("-" if m.angle_deg is None else f"{m.angle_deg:.4f}")
-    pairs = zip(m.d_index, m.d_thickness_per_nm, strict=True)
-    return row + [text for dn, dt in pairs for text in (f"{dn:.4f}", f"{dt:.3e}")]
+@contextmanager
+def _progress() -> Iterator[Progress | None]:
+    """A bar on standard error, on a terminal only."""
+    if not sys.stderr.isatty():
+        yield None
+        return
+    from rich.console import Console
+    from rich.progress import BarColumn, TextColumn, TimeRemainingColumn
+    from rich.progress import Progress as Bar
 
-
-def _columns(rows: Sequence[Sequence[str]]) -> list[str]:
-    widths = [max(len(row[k]) for row in rows) for k in range(len(rows[0]))]
-    return ["  ".join(cell.rjust(width) for cell, width in zip(row, widths, strict=True)) for row in rows]
+    layout = (
+        TextColumn("{task.description}"),
+        BarColumn(),
+        TextColumn("{task.percentage:.0f} %"),
+        TimeRemainingColumn(),
+    )
+    with Bar(*layout, console=Console(stderr=True), transient=True) as bar:
+        task = bar.add_task("", total=None)
+        yield lambda what, done, total: bar.update(task, description=what, completed=done, total=total)

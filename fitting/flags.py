@@ -26,12 +26,12 @@ FLAGS: dict[str, str] = {
     "interrupted": "The run was stopped before this site was fitted.",
     "guide_no_vertical_mode": "The layers through the guide hold no mode: the core is too thin, its index too low, "
     "or the polarisation is cut off. Check thickness and index of the core, and the wavelength.",
-    "guide_no_lateral_mode": "The guide is too narrow, or etched too little, to hold this lateral mode. Check the drawn "
-    "width, the width bias and the etch depth.",
+    "guide_no_lateral_mode": "The guide is too narrow, or etched too little, to hold this lateral mode. Check the "
+    "drawn width, the width bias and the etch depth.",
     "guide_leaks_sideways": "The mode lies below a mode of the other polarisation in the layers beside the guide "
     "and loses light into them, the more so in bends. Etch deeper, or use the other polarisation.",
-    "guide_leaks_down": "The substrate of high index lies so near that it takes light out of the mode and moves it; the "
-    "number is for a substrate without that effect. A thicker buffer layer helps.",
+    "guide_leaks_down": "The substrate of high index lies so near that it takes light out of the mode and moves it; "
+    "the number is for a substrate without that effect. A thicker buffer layer helps.",
     "guide_bend_radiates": "The bend loses light outwards, and its effective index is less exact. Use a larger radius, "
     "or a guide that confines more.",
     "guide_bend_out_of_range": "The bend is too tight for the model: no number is given. Use a larger radius.",

@@ -107,7 +107,9 @@ def test_catalogue_shift_and_start_together(tmp_path: Path, capsys: pytest.Captu
 
     Fused silica (I. H. Malitson, J. Opt. Soc. Am. 55, 1205, 1965: 1.45701793 at 632.8 nm relative to air at 20 °C).
     """
-    text = GOOD.replace('index = "fused silica"', 'index = { material = "fused silica", shift = 0.001 }')
+    text = GOOD.split("[guide]")[0].replace(
+        'index = "fused silica"', 'index = { material = "fused silica", shift = 0.001 }'
+    )
     text = text.replace("[1.90, 2.05] }", "[1.90, 2.05], start = 2.0 }").replace(
         "[300, 700] }", "[300, 700], value = 500 }"
     )
@@ -173,6 +175,7 @@ def test_missing_starts_are_all_named(tmp_path: Path, capsys: pytest.CaptureFixt
         f"{path}: column layer[2].index: to be fitted, without a start{told}",
         f"{path}: column layer[2].thickness_nm: to be fitted, without a start{told}",
         f"{path}: column prism.base_angle_deg: to be fitted, without a start{told}",
+        f"{path}: column guide.width_bias_nm: to be fitted, without a start{told}",
         "command line: column --wavelength-nm: 190 nm, air is known for wavelengths from 230 nm, not at 190 nm, "
         "ask for another wavelength, or give that index as a number or a table",
         "command line: column --wavelength-nm: 0.6 nm, wavelengths are in nm, 100 to 50000, if µm was meant, write 600",
