@@ -8,8 +8,7 @@ the same solve as the value, see `vector_modes`.
 
 from __future__ import annotations
 
-from collections.abc import Sequence
-from dataclasses import dataclass, fields, replace
+from dataclasses import dataclass, replace
 
 import numpy as np
 
@@ -19,8 +18,8 @@ from .guide import eim_modes
 from .layers import Array
 from .map_basis import Halves, basis, design_nodes, exponents, fit, fit_values
 from .map_bend import bend_ratio
-from .map_nodes import NodeJob, NodePool, Progress, single
-from .map_terms import slopes_by_quantity
+from .map_nodes import NodeJob, NodePool, Progress, single, stacked, taken
+from .map_terms import axis_slopes, slopes_by_quantity
 from .map_window import WAVELENGTH, MapWindow
 from .vector_mesh import lay_out
 from .vector_modes import FINE, NoSuchModeError, expected_index, merged, side_index, vector_mode
@@ -80,14 +79,12 @@ def build_map(
         return _refined(window, target, solver)
 
 
-def build_bend(
-    window: MapWindow, radius_um: float, workers: int | None = None, progress: Progress | None = None
-) -> BendRatio:
-    """What the method's shift of a bend is to be multiplied by over a window, found at one radius, the tightest in
-    use. Raises MapError where the window does not hold the mode."""
+def build_bend(window: MapWindow, workers: int | None = None, progress: Progress | None = None) -> BendRatio:
+    """What the method's shift of a bend is to be multiplied by over a window. Raises MapError where the window does not
+    hold the mode."""
     solver = _Solver(window, workers, progress)
     with solver.pool:
-        return bend_ratio(window, radius_um, solver.pool, solver.bound, solver.job)
+        return bend_ratio(window, solver.pool, solver.bound, solver.job)
 
 
 def _refined(window: MapWindow, goal: MapGoal, solver: _Solver) -> CorrectionMap:
@@ -197,7 +194,7 @@ class _Solver:
         if len(known) < _LEAST_SHARE * len(found):
             raise MapError(len(known), len(found))
         rows = [k for k, _ in known]
-        return _difference(window, xi[rows], _stack([m for _, m in known]), _take(plain, rows), slopes[rows])
+        return _difference(window, xi[rows], stacked([m for _, m in known]), taken(plain, rows), slopes[rows])
 
     def job(self, section: CrossSection, method: float) -> NodeJob:
         near = method + 0.7 * self.shortfall if np.isfinite(method) else expected_index(section, self.window.tm, 0)
@@ -222,27 +219,8 @@ def _middle(window: MapWindow) -> Array:
 
 
 def _difference(window: MapWindow, xi: Array, vector: GuideModes, plain: GuideModes, slopes: Array) -> _Data:
-    axes = [_axis_slopes(window, m, slopes) for m in (vector, plain)]
+    axes = [axis_slopes(window, m, slopes) for m in (vector, plain)]
     return _Data(
         xi, vector.N - plain.N, (axes[0] - axes[1]) * window.half_extent(),
         slopes_by_quantity(window, vector) - slopes_by_quantity(window, plain),
     )  # fmt: skip
-
-
-def _axis_slopes(window: MapWindow, m: GuideModes, slopes: Array) -> Array:
-    """Slopes (B, d) along the active axes."""
-    core = window.core
-    every = (
-        m.dwidth_per_um, m.dt_per_um[:, core - 1], m.detch_per_um, m.dsidewall_per_deg, m.dn[:, core],
-        m.slope_per_um(slopes),
-    )  # fmt: skip
-    return np.stack([every[k] for k in window.active], axis=-1) if window.active else np.zeros((m.N.size, 0))
-
-
-def _stack(modes: Sequence[GuideModes]) -> GuideModes:
-    names = [f.name for f in fields(GuideModes)]
-    return GuideModes(**{name: np.stack([getattr(m, name) for m in modes]) for name in names})
-
-
-def _take(modes: GuideModes, rows: list[int]) -> GuideModes:
-    return GuideModes(**{f.name: getattr(modes, f.name)[rows] for f in fields(GuideModes)})

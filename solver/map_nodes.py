@@ -10,7 +10,7 @@ import os
 from collections.abc import Callable, Iterator, Sequence
 from concurrent.futures import ProcessPoolExecutor
 from contextlib import contextmanager
-from dataclasses import dataclass
+from dataclasses import dataclass, fields
 from functools import partial
 from multiprocessing import get_context
 from typing import Any
@@ -114,3 +114,14 @@ def single(section: CrossSection, row: int) -> CrossSection:
         np.asarray(x[row]) for x in (section.width_um, section.wavelength_um, section.sidewall_deg)
     )
     return CrossSection(section.n[row], section.t_um[row], section.core, parts[0], parts[1], etch, parts[2])
+
+
+def stacked(modes: Sequence[GuideModes]) -> GuideModes:
+    """One batch of single modes."""
+    names = [f.name for f in fields(GuideModes)]
+    return GuideModes(**{name: np.stack([getattr(m, name) for m in modes]) for name in names})
+
+
+def taken(modes: GuideModes, rows: list[int]) -> GuideModes:
+    """Some of a flat batch."""
+    return GuideModes(**{f.name: getattr(modes, f.name)[rows] for f in fields(GuideModes)})

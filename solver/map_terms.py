@@ -63,3 +63,13 @@ def along_quantities(window: MapWindow, slope: Array, others: Array, index_slope
     if WAVELENGTH in window.active:
         out[:, WAVE] -= (out[:, -index_slopes.shape[1] :] * index_slopes).sum(axis=1)
     return out
+
+
+def axis_slopes(window: MapWindow, m: GuideModes, slopes: Array) -> Array:
+    """Slopes (B, d) along the active axes, in their own units. slopes (B, L): of the nominal indices by wavelength."""
+    core = window.core
+    every = (
+        m.dwidth_per_um, m.dt_per_um[:, core - 1], m.detch_per_um, m.dsidewall_per_deg, m.dn[:, core],
+        m.slope_per_um(slopes),
+    )  # fmt: skip
+    return np.stack([every[k] for k in window.active], axis=-1) if window.active else np.zeros((m.N.size, 0))

@@ -11,6 +11,8 @@ both material tensors are multiplied by diag(s_y/s_x, s_x/s_y, s_x s_y).
 
 from __future__ import annotations
 
+from dataclasses import replace
+
 import numpy as np
 
 from .layers import Array
@@ -24,7 +26,8 @@ _STRENGTH, _POWER = 6.0, 2
 def bent(m: Materials, space: Space, radius_um: float) -> Materials:
     """Materials of a guide bent to a radius, its centre of curvature on the side of negative x."""
     h = 1 + space.x / radius_um
-    return _times(m, (h, h, 1 / h))
+    rate = 1 / (radius_um * h)
+    return replace(_times(m, (h, h, 1 / h)), growth=(rate, rate, -rate))
 
 
 def mapped_index(m: Materials, space: Space, radius_um: float) -> Materials:

@@ -58,10 +58,12 @@ class Space:
 
 @dataclass(frozen=True)
 class Materials:
-    """Relative permittivity and permeability along x, y, z, each (T, Q) or broadcasting to it."""
+    """Relative permittivity and permeability along x, y, z, each (T, Q) or broadcasting to it. growth: how fast both
+    grow along x, per µm of x and of themselves, where they do so within a layer."""
 
     eps: tuple[Complex, Complex, Complex]
     mu: tuple[Complex, Complex, Complex]
+    growth: tuple[Complex, Complex, Complex] | None = None
 
 
 @dataclass(frozen=True)
@@ -205,7 +207,18 @@ def motion_change(space: Space, m: Materials, field: Field, k0: float, beta2: co
     a = -div * f.curl**2 / mu[2]
     a = a - k0**2 * (e[0] * (2 * dex * f.ex + div * f.ex**2) + e[1] * (2 * dey * f.ey + div * f.ey**2))
     b = (2 * dhx * hx + div * hx**2) / mu[1] + (2 * dhy * hy + div * hy**2) / mu[0] - k0**2 * div * e[2] * f.ez**2
+    if m.growth is not None:
+        gx, gy, gz = (g * _at_points(space, velocity[0]) for g in m.growth)
+        a = a - gz * f.curl**2 / mu[2] - k0**2 * (gx * e[0] * f.ex**2 + gy * e[1] * f.ey**2)
+        b = b - gy * hx**2 / mu[1] - gx * hy**2 / mu[0] - k0**2 * gz * e[2] * f.ez**2
     return complex((space.weight * (a + beta2 * b)).sum())
+
+
+def _at_points(space: Space, nodal: Array) -> Array:
+    """Values at the quadrature points (T, Q) of what is linear between the nodes (nodes)."""
+    first, second, third = (nodal[space.mesh.t[k]][:, None] for k in range(3))
+    xi, eta = np.asarray(space.edge_basis.X)
+    return np.asarray(first * (1 - xi - eta) + second * xi + third * eta)
 
 
 def _slopes(space: Space, velocity: Array) -> Array:

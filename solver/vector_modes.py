@@ -100,8 +100,8 @@ def vector_mode(
     """The mode of a lateral order (0 first) of one cross-section (empty batch shape).
 
     near: expected effective index; without it, or without a mesh, a coarse solve is made first. A substrate that no
-    film exceeds counts as buffer, unless `rule` has an absorber. radius_um: bend, see `vector_bend`; derivatives by
-    dimensions are not those of a bend then. mapped: the customary mapped index instead of a bend's exact materials.
+    film exceeds counts as buffer, unless `rule` has an absorber. radius_um: bend, see `vector_bend`. mapped: the
+    customary mapped index instead of a bend's exact materials; derivatives by dimensions are not right then.
     Raises NoSuchModeError where no field is like the one asked for.
     """
     work = section if rule.absorber else replace(section, n=without_substrate(section.n)[0])

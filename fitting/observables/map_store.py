@@ -53,10 +53,10 @@ def stored_map(
     goal: MapGoal | None = None,
     workers: int | None = None,
     progress: Progress | None = None,
-    tightest_um: float | None = None,
+    bends: bool = False,
 ) -> CorrectionMap:
-    """The map of a window: from the cache, or built and kept there. tightest_um: smallest bend radius in use, None or
-    infinite for straight guides alone. A cache that cannot be written is done without. Raises MapError where no map
+    """The map of a window: from the cache, or built and kept there. bends: whether bent guides are asked for, for
+    which a ratio comes with it. A cache that cannot be written is done without. Raises MapError where no map
     can be made."""
     target = MapGoal() if goal is None else goal
     made = _stored(
@@ -64,11 +64,11 @@ def stored_map(
         lambda: build_map(window, target, workers, progress),
         lambda numbers, table: CorrectionMap(window=window, table=table, **numbers),
     )
-    if tightest_um is None or not np.isfinite(tightest_um):
+    if not bends:
         return made
     bend = _stored(
-        _key(window, {"bend": tightest_um}),
-        lambda: build_bend(window, tightest_um, workers, progress),
+        _key(window, {"bend": True}),
+        lambda: build_bend(window, workers, progress),
         lambda numbers, table: BendRatio(table=table, **numbers),
     )
     return replace(made, bend=bend)

@@ -119,20 +119,19 @@ def test_a_folder_that_cannot_be_written_costs_only_the_cache(builds, monkeypatc
 
 
 def test_bends_are_kept_beside(builds, monkeypatch):
-    """The ratio for bends has a file of its own: the map is not built again for it, nor for another radius."""
-    radii: list[float] = []
+    """The ratio for bends has a file of its own: it is built once, and the map is not built again for it."""
+    made_bends: list[MapWindow] = []
 
-    def build(_: MapWindow, radius_um: float, *__: object) -> BendRatio:
-        radii.append(radius_um)
-        return BendRatio(1, np.full((1, 2, 1), 0.7), 0.01, radius_um)
+    def build(for_window: MapWindow, *_: object) -> BendRatio:
+        made_bends.append(for_window)
+        return BendRatio(1, np.full((1, 2, 1), 0.7), 0.01, 25.0)
 
     monkeypatch.setattr(map_store, "build_bend", build)
     assert map_store.stored_map(window()).bend is None
-    found = [map_store.stored_map(window(), tightest_um=radius).bend for radius in (10.0, 10.0, 20.0)]
-    assert len(builds) == 1 and radii == [10.0, 20.0]
+    found = [map_store.stored_map(window(), bends=True).bend for _ in range(2)]
+    assert len(builds) == len(made_bends) == 1
     assert found[0] is not None and found[1] is not None and found[0].error == found[1].error == 0.01
     assert np.array_equal(found[0].table, found[1].table)
-    assert map_store.stored_map(window(), tightest_um=np.inf).bend is None
 
 
 def test_nothing_else_is_left_behind(builds, tmp_path):
