@@ -8,7 +8,6 @@ from typing import Any, Literal
 
 import numpy as np
 from layerlot.solver.cross_section import GuideModes
-from layerlot.solver.guide import eim_modes
 
 from .flags import FLAGS, flag
 from .observables.guide import (
@@ -20,6 +19,7 @@ from .observables.guide import (
     path_um,
     uniaxial_layers,
 )
+from .observables.guide_map import guide_modes
 from .observables.guide_response import order_spacing, per_degree, resonance_shift
 from .records import Array, Flag
 from .stack import Stack
@@ -85,15 +85,8 @@ def predict_guide(
     if uniaxial_layers(stack):
         return [_none(stack, c, plain) for c in contexts]
     parts = guide_parts(stack, contexts)
-    modes = guide_modes(stack, parts, plain, progress)
+    modes = guide_modes(stack, contexts, parts, plain, progress)
     return [_prediction(stack, c, parts, modes, k, plain) for k, c in enumerate(contexts)]
-
-
-def guide_modes(
-    stack: Stack, parts: GuideParts, plain: bool = False, progress: Progress | None = None, workers: int | None = None
-) -> GuideModes:
-    """Modes of guides by the plain effective index method."""
-    return eim_modes(parts.section, parts.tm, parts.order, parts.radius_um)
 
 
 def _prediction(

@@ -40,6 +40,7 @@ CODES = {
     GuideFlag.NEAR_CUT_OFF: "guide_near_cut_off",
     GuideFlag.OUTSIDE_MAP: "guide_outside_map",
     GuideFlag.MAP_GOAL_MISSED: "guide_map_error",
+    GuideFlag.NO_MAP: "guide_no_map",
 }
 
 
