@@ -13,9 +13,10 @@ import click
 from layerlot.solver.materials import Table
 
 from .observables.guide import GuideContext, guide_parts
+from .observables.guide_map import Progress
 from .predict_faults import guide_faults, start_faults, wavelength_faults
 from .predict_film import film_record, predict_film
-from .predict_guide import GuidePrediction, Progress, guide_contexts, guide_record, predict_guide
+from .predict_guide import GuidePrediction, guide_contexts, guide_record, predict_guide
 from .predict_text import prediction_text
 from .records import Fault, InputRefused, Place
 from .stack import Stack, load_stack

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable, Mapping, Sequence
+from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
 from typing import Any, Literal
 
@@ -19,12 +19,11 @@ from .observables.guide import (
     path_um,
     uniaxial_layers,
 )
-from .observables.guide_map import guide_modes
+from .observables.guide_map import Progress, guide_modes
 from .observables.guide_response import order_spacing, per_degree, resonance_shift
 from .records import Array, Flag
 from .stack import Stack
 
-Progress = Callable[[str, int, int], None]
 Model = Literal["corrected", "eim"]
 
 # Keys of the sensitivities, and of the shifts of a resonance that go with them. Shifts are per nm, degree, 0.001 of
@@ -95,13 +94,11 @@ def _prediction(
     lam_um = float(parts.wavelength_um[k])
     typed_share = context.wavelength_um / lam_um
     group = float(modes.group_index(parts.wavelength_um, parts.dn_dwavelength)[k])
-    changes = _changes(stack, parts, modes, k)
+    reference = float(stack.index_inside(1.0, lam_um))
+    changes = _changes(stack, parts, modes, k, reference)
     shift_um = resonance_shift(changes * np.array(_SHIFT_STEP), lam_um, group) * typed_share
     length_um = path_um(context.structure)
     spacing_um = np.nan if length_um is None else float(order_spacing(lam_um, group, length_um)) * typed_share
-    reference = float(stack.index_inside(1.0, lam_um))
-    # An index and its reference scale alike, so that a change per index needs no conversion.
-    scale = np.array([1.0 if key == "core_index" else reference for key in SENSITIVITY])
     corrected = np.isfinite(modes.error[k]) or (np.isnan(modes.N[k]) and not plain)
     films = zip(stack.layers[1:-1], modes.dn[k, 1:-1], modes.dt_per_um[k] / 1000 / reference, strict=True)
     notes = () if corrected else (flag("guide_plain_model"),)
@@ -116,15 +113,16 @@ def _prediction(
         model_u=_known(modes.error[k] / reference),
         model_u_group=_known(modes.group_error[k] / reference),
         spacing_nm=_known(spacing_um * 1e3),
-        sensitivity=dict(zip(SENSITIVITY, map(_known, changes / scale), strict=True)),
+        sensitivity=dict(zip(SENSITIVITY, map(_known, changes / reference), strict=True)),
         shift=dict(zip(SHIFT, map(_known, shift_um * 1e6), strict=True)),
         films={film.name: (_known(dn), _known(dt)) for film, dn, dt in films},
         flags=(*guide_flags(int(modes.flags[k])), *notes),
     )
 
 
-def _changes(stack: Stack, parts: GuideParts, modes: GuideModes, k: int) -> Array:
-    """Change of the absolute effective index in the order of `SENSITIVITY`; NaN where there is none."""
+def _changes(stack: Stack, parts: GuideParts, modes: GuideModes, k: int, reference: float) -> Array:
+    """Change of the absolute effective index in the order of `SENSITIVITY`; NaN where there is none. reference: index
+    of the medium that a typed core index is relative to."""
     core = core_number(stack)
     etched_through = parts.section.etch_um is None
     no_thermo = stack.layers[core].name in parts.without_thermo
@@ -134,7 +132,7 @@ def _changes(stack: Stack, parts: GuideParts, modes: GuideModes, k: int) -> Arra
             modes.dt_per_um[k, core - 1] / 1000,
             np.nan if etched_through else modes.detch_per_um[k] / 1000,
             modes.dsidewall_per_deg[k],
-            modes.dn[k, core],
+            modes.dn[k, core] * reference,
             np.nan if no_thermo else float(per_degree(modes.dn[k], parts.dn_dtemperature[k])),
         ]
     )

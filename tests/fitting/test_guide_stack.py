@@ -52,8 +52,8 @@ def test_indices_of_materials() -> None:
     step = 1e-3
     ahead, behind = (guide_parts(stack, contexts(stack, 1550.0 + s * step * 1000)) for s in (1, -1))
     difference = (ahead.section.n - behind.section.n) / (2 * step)
-    # Third derivatives of about 1 per µm³ leave 1e-6 / 6.
-    assert parts.dn_dwavelength == pytest.approx(difference, abs=1e-6)
+    # 1550 nm may be a point of silicon's table, where the second derivative jumps by parts in a thousand per µm².
+    assert parts.dn_dwavelength == pytest.approx(difference, abs=2e-6)
     warmer = guide_parts(parse_stack(STRIP.replace("_C = 25.0", "_C = 27.0"), "x"), contexts(stack, 1550.0))
     assert (warmer.section.n - parts.section.n) / 2 == pytest.approx(parts.dn_dtemperature, rel=1e-6)
 
