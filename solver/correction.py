@@ -16,10 +16,9 @@ import numpy as np
 from numpy.typing import ArrayLike
 
 from .cross_section import BoolArray, CrossSection, GuideFlag, GuideModes, IntArray
-from .guide import eim_modes
 from .layers import Array
 from .map_basis import Halves
-from .map_terms import FILMS, WAVE, along_quantities, offsets
+from .map_terms import FILMS, WAVE, along_quantities, base_modes, offsets
 from .map_window import MapWindow
 
 # Guides evaluated at once: their polynomials stay in the processor's cache.
@@ -71,7 +70,7 @@ def corrected_modes(section: CrossSection, a_map: CorrectionMap, radius_um: Arra
     carried on as a straight line, flagged.
     """
     window, shape = a_map.window, section.shape
-    modes = eim_modes(section, window.tm, window.order)
+    modes = base_modes(section, window.tm, window.order)
     flat = section.flat()
     radius = np.broadcast_to(np.inf if radius_um is None else np.asarray(radius_um, dtype=float), shape).reshape(-1)
     blocks = [_change(a_map, _rows(flat, k)) for k in range(0, flat.width_um.size, _BLOCK)]
@@ -80,7 +79,7 @@ def corrected_modes(section: CrossSection, a_map: CorrectionMap, radius_um: Arra
     error, group_error = np.full(radius.size, a_map.error), np.full(radius.size, a_map.group_error)
     flags: IntArray = modes.flags.reshape(-1) | np.where(outside, int(GuideFlag.OUTSIDE_MAP), 0)
     if np.isfinite(radius).any():
-        bent = eim_modes(section, window.tm, window.order, radius_um)
+        bent = base_modes(section, window.tm, window.order, radius_um)
         shift = _values(bent, change.shape[1]) - _values(modes, change.shape[1])
         own = a_map.bend.error if a_map.bend else 1.0
         lam = section.wavelength_um.reshape(-1)

@@ -15,11 +15,10 @@ import numpy as np
 
 from .correction import BendRatio
 from .cross_section import CrossSection, without_substrate
-from .guide import eim_modes
 from .layers import Array
 from .map_basis import Halves, basis, design_nodes, exponents, fit
 from .map_nodes import NodeJob, NodePool, single, stacked, taken
-from .map_terms import axis_slopes
+from .map_terms import axis_slopes, base_modes
 from .map_window import MapWindow
 from .vector_mesh import GuideMesh, lay_out
 from .vector_modes import FINE, bend_room_um, merged, side_index
@@ -78,8 +77,8 @@ def _ratios(
 ) -> _Ratios:
     """Ratios at those of the points (B, d) whose guides have the mode, straight and bent."""
     section, index_slopes = window.section_at(window.from_unit(xi))
-    plain = eim_modes(section, window.tm, window.order)
-    turned = eim_modes(section, window.tm, window.order, radius_um)
+    plain = base_modes(section, window.tm, window.order)
+    turned = base_modes(section, window.tm, window.order, radius_um)
     straight = [job(single(section, k), float(plain.N[k])) for k in range(xi.shape[0])]
     bends = [
         replace(j, near=j.near + float(np.nan_to_num(turned.N[k] - plain.N[k])), radius_um=radius_um)

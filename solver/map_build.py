@@ -14,12 +14,11 @@ import numpy as np
 
 from .correction import BendRatio, CorrectionMap
 from .cross_section import CrossSection, GuideModes, without_substrate
-from .guide import eim_modes
 from .layers import Array
 from .map_basis import Halves, basis, design_nodes, exponents, fit, fit_values
 from .map_bend import bend_ratio
 from .map_nodes import NodeJob, NodePool, Progress, single, stacked, taken
-from .map_terms import axis_slopes, slopes_by_quantity
+from .map_terms import axis_slopes, base_modes, slopes_by_quantity
 from .map_window import WAVELENGTH, MapWindow
 from .vector_mesh import lay_out
 from .vector_modes import FINE, NoSuchModeError, expected_index, merged, side_index, vector_mode
@@ -167,7 +166,7 @@ class _Solver:
         # Laid out in the middle of the window, wide enough for its weakest mode.
         self.mesh = lay_out(middle, max(bound, beside + 1e-4), beside, FINE)
         self.pool = NodePool(workers, progress)
-        method = float(eim_modes(self.weak[0], window.tm, window.order).N)
+        method = float(base_modes(self.weak[0], window.tm, window.order).N)
         self.shortfall = bound - method if np.isfinite(method) else 0.0
 
     def _weakest_bound(self, weak: CrossSection, middle: CrossSection, beside: float) -> float:
@@ -186,7 +185,7 @@ class _Solver:
     def data(self, xi: Array) -> _Data:
         window = self.window
         section, slopes = window.section_at(window.from_unit(xi))
-        plain = eim_modes(section, window.tm, window.order)
+        plain = base_modes(section, window.tm, window.order)
         jobs = [self.job(single(section, k), float(plain.N[k])) for k in range(xi.shape[0])]
         found = self.pool.solve(jobs, self.mesh)
         known = [(k, m) for k, m in enumerate(found) if m is not None and np.isfinite(plain.N[k])]
@@ -206,7 +205,7 @@ class _Solver:
         window, worst = self.window, np.zeros(2)
         finer = replace(FINE.finer(1.6), reach=1.5 * FINE.reach)
         for section, slopes in (self.middle, self.weak):
-            near = float(eim_modes(section, window.tm, window.order).N) + self.shortfall
+            near = float(base_modes(section, window.tm, window.order).N) + self.shortfall
             usual = vector_mode(section, window.tm, window.order, near=near, mesh=self.mesh).modes
             better = vector_mode(section, window.tm, window.order, rule=finer).modes
             groups = [float(m.group_index(section.wavelength_um, slopes)) for m in (usual, better)]

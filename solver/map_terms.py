@@ -5,14 +5,26 @@ The order: width, etch depth, sidewall, wavelength at fixed indices, L-2 thickne
 
 from __future__ import annotations
 
+from dataclasses import replace
+
 import numpy as np
+from numpy.typing import ArrayLike
 
 from .cross_section import CrossSection, GuideModes
+from .guide import eim_modes
 from .layers import Array
 from .map_window import ETCH, INDEX, SIDEWALL, THICKNESS, WAVELENGTH, WIDTH, MapWindow
 
 # Place of the wavelength among the quantities, and of the first thickness.
 WAVE, FILMS = 3, 4
+
+
+def base_modes(section: CrossSection, tm: bool, order: int, radius_um: ArrayLike | None = None) -> GuideModes:
+    """What a map corrects: the effective index method for upright walls at the mean width. The method with sloped walls
+    has a kink at 90 degrees, where undercut begins; the reference has none, so a map must not be made to mend it."""
+    upright = replace(section, sidewall_deg=np.full_like(section.sidewall_deg, 90.0))
+    modes = eim_modes(upright, tm, order, radius_um)
+    return replace(modes, dsidewall_per_deg=np.zeros_like(modes.N))
 
 
 def slopes_by_quantity(window: MapWindow, modes: GuideModes) -> Array:

@@ -89,8 +89,8 @@ class MapWindow:
         return np.asarray((self.high[k] - self.low[k]) / 2)
 
     def weakest(self) -> Array:
-        """The corner (6) where the mode is bound most weakly: narrow, thin, of low index, at long wavelength; and little
-        etched, for then the core left beside the guide all but carries the mode away."""
+        """The corner (6) where the mode is bound most weakly: narrow, thin, of low index, at long wavelength and
+        little etched: then the core left beside the guide all but carries the mode away."""
         out = (self.low + self.high) / 2
         ends = [WIDTH, THICKNESS, INDEX, ETCH]
         out[ends] = self.low[ends]
