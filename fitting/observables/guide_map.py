@@ -39,6 +39,8 @@ _PADDED = (WIDTH, THICKNESS, INDEX)
 _PADDING = 0.01
 # The wavelength axis ends at multiples of this, and is no shorter than twice it, in µm.
 _WAVE_STEP_UM = 0.05
+# More than a wavelength differs between air and vacuum: ranges may be stated in either.
+_AIR = 4e-4
 
 
 def guide_modes(
@@ -117,8 +119,8 @@ def _wave_axis(stack: Stack, low: float, high: float) -> tuple[float, float]:
         middle = np.round((low + high) / 2 / step) * step
         first, last = min(first, middle - step), max(last, middle + step)
     known = [x.index.material.range_um for x in stack.layers if x.index.material is not None]
-    first = max([first, *(r[0] for r in known if r[0] <= low)])
-    last = min([last, *(r[1] for r in known if r[1] >= high)])
+    first = max([first, *(r[0] * (1 + _AIR) for r in known)])
+    last = min([last, *(r[1] * (1 - _AIR) for r in known)])
     return round(float(min(first, low)), 9), round(float(max(last, high)), 9)
 
 
