@@ -11,9 +11,9 @@ from dataclasses import replace
 import numpy as np
 import pytest
 from layerlot.solver.correction import corrected_modes
-from layerlot.solver.map_build import MapError, MapGoal, build_map
 from layerlot.solver.cross_section import GuideFlag, GuideModes
 from layerlot.solver.guide import eim_modes
+from layerlot.solver.map_build import MapError, MapGoal, build_map
 from layerlot.solver.map_window import MapWindow, index_points_um, map_window
 
 from tests.solver.map_study import study
