@@ -16,10 +16,12 @@ from .observables.guide import (
     core_number,
     guide_flags,
     guide_parts,
+    mean_x,
     path_um,
     uniaxial_layers,
 )
 from .observables.guide_map import Progress, guide_modes
+from .observables.guide_nominal import at_nominal
 from .observables.guide_response import order_spacing, per_degree, resonance_shift
 from .records import Array, Flag
 from .stack import Stack
@@ -35,6 +37,8 @@ SHIFT = (
     "width_pm_per_nm", "thickness_pm_per_nm", "etch_pm_per_nm", "sidewall_pm_per_deg", "core_index_pm_per_1e-3",
     "temperature_pm_per_C",
 )  # fmt: skip
+# Up to this many widths each has a map of its own: quicker than one map over all widths that the bias may make.
+_FEW_WIDTHS = 3
 _SHIFT_STEP = (1.0, 1.0, 1.0, 1.0, 1e-3, 1.0)
 
 
@@ -84,7 +88,9 @@ def predict_guide(
     if uniaxial_layers(stack):
         return [_none(stack, c, plain) for c in contexts]
     parts = guide_parts(stack, contexts)
-    modes = guide_modes(stack, contexts, parts, plain, progress)
+    # Nominal values need no map over the whole window of the file, which may take minutes. Many widths share one.
+    keep_bias = len({(c.tm, c.structure.drawn_width_um) for c in contexts}) > _FEW_WIDTHS
+    modes = guide_modes(at_nominal(stack, mean_x(contexts), keep_bias), contexts, parts, plain, progress)
     return [_prediction(stack, c, parts, modes, k, plain) for k, c in enumerate(contexts)]
 
 

@@ -146,7 +146,7 @@ def guide_parts(
         raise ValueError(f"no quantity goes by {', '.join(sorted(unknown))}")
     guide = _guide(stack)
     lam = np.array([float(stack.to_vacuum_um(c.wavelength_um)) for c in contexts])
-    indices = layer_indices(stack, lam, [c.temperature_C for c in contexts], own, _mean_x(contexts))
+    indices = layer_indices(stack, lam, [c.temperature_C for c in contexts], own, mean_x(contexts))
     bias = own.get("width_bias", nominal(guide.width_bias_um))
     films = [(x, x.thickness_um) for x in stack.layers[1:-1] if x.thickness_um is not None]
     etch = None if guide.etch_depth_um is None else own.get("etch_depth", nominal(guide.etch_depth_um))
@@ -234,9 +234,9 @@ def _index_window(
     """How far the core's absolute index may lie from the nominal one, that of other temperatures included."""
     mine = [contexts[k] for k in rows]
     lam = np.array([float(stack.to_vacuum_um(c.wavelength_um)) for c in mine])
-    number, mean_x = core_number(stack), _mean_x(contexts)
-    here = layer_indices(stack, lam, [c.temperature_C for c in mine], mean_x=mean_x).n[:, number]
-    moved = here - layer_indices(stack, lam, mean_x=mean_x).n[:, number]
+    number, middle = core_number(stack), mean_x(contexts)
+    here = layer_indices(stack, lam, [c.temperature_C for c in mine], mean_x=middle).n[:, number]
+    moved = here - layer_indices(stack, lam, mean_x=middle).n[:, number]
     low, high = 0.0, 0.0
     q = core.index.quantity if core.index.kind == "quantity" else core.index.shift
     if core.index.kind == "fit_cauchy":
@@ -247,8 +247,8 @@ def _index_window(
     return float((ends[0] + moved).min()), float((ends[1] + moved).max())
 
 
-def _mean_x(contexts: Sequence[GuideContext]) -> float:
-    """Where a curve to be fitted has its first term, as in a film fit at these wavelengths."""
+def mean_x(contexts: Sequence[GuideContext]) -> float:
+    """Mean of 1/wavelength² in µm^-2, as typed: where a curve to be fitted has its first term, as in a film fit."""
     return float(np.mean([1 / w**2 for w in {c.wavelength_um for c in contexts}]))
 
 

@@ -310,7 +310,7 @@ def test_blank_stack_file_is_a_good_one(
     assert capsys.readouterr().out.startswith(f"Written: {kind}.toml\n")
     stack = load_stack(Path(f"{kind}.toml"))
     assert (stack.guide is not None, len(stack.structures)) == ((True, 2) if kind == "guide" else (False, 0))
-    assert main(["predict", f"{kind}.toml"]) == 0
+    assert main(["predict", f"{kind}.toml", "--plain-eim"]) == 0
 
 
 def test_blank_workbook_is_read(tmp_path: Path, capsys: pytest.CaptureFixture[str]) -> None:

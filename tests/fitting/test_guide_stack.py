@@ -4,8 +4,9 @@ from __future__ import annotations
 
 import numpy as np
 import pytest
-from layerlot.fitting.observables.guide import GuideContext, guide_parts, guide_windows, path_um
+from layerlot.fitting.observables.guide import GuideContext, guide_parts, guide_windows, mean_x, path_um
 from layerlot.fitting.observables.guide_index import layer_indices
+from layerlot.fitting.observables.guide_nominal import at_nominal
 from layerlot.fitting.observables.parameters import Context, build_layout
 from layerlot.fitting.stack import Stack, parse_stack
 from layerlot.solver.map_window import AXES, index_points_um, map_window
@@ -100,13 +101,40 @@ def test_guides_and_films_share_their_indices(index: str, reference: str) -> Non
     layout = build_layout(stack, [Context(w, False, None) for w in (1.45, 1.55, 1.6)])
     film = layout.n_fixed + layout.n_map @ layout.starts()
     assert stack.index_typed(parts.section.n, parts.wavelength_um[:, None]) == pytest.approx(film, abs=1e-12)
-    ahead, behind = (layer_indices(stack, parts.wavelength_um + s, None, None, _mean_x()).n for s in (1e-4, -1e-4))
+    middle = mean_x(contexts(stack, 1450.0, 1550.0, 1600.0))
+    ahead, behind = (layer_indices(stack, parts.wavelength_um + s, None, None, middle).n for s in (1e-4, -1e-4))
     # Steps of 0.1 nm: a tenth of 1e-8 of curvature, and of rounding 1e-16 / 1e-4.
     assert parts.dn_dwavelength == pytest.approx((ahead - behind) / 2e-4, abs=2e-6)
 
 
-def _mean_x() -> float:
-    return float(np.mean([1 / w**2 for w in (1.45, 1.55, 1.6)]))
+@pytest.mark.parametrize("reference", ["", AIR], ids=["vacuum", "air"])
+@pytest.mark.parametrize("near", ['"silicon nitride (Luke 2015)"', "1.95"])
+def test_stack_at_nominal_values(near: str, reference: str) -> None:
+    """A stack at its nominal values has the same guides as the stack itself, and windows without extent but for drawn
+    widths and wavelengths, or for the bias where that is kept."""
+    text = STRIP.replace('"full"', "{ fit = [100, 200], start = 150 }").replace(
+        "_deg = 90.0", "_deg = { value = 85, u = 1 }"
+    )
+    text = reference + text.replace("reference_temperature_C = 25.0\n", "").replace(
+        'name = "cover"\nindex = "fused silica"', 'name = "cover"\nindex = { value = 1.45, u = 0.01 }'
+    )
+    core = "thickness_nm = { value = 220, u = 1 }"
+    text = text.replace(f'index = "silicon (Li 1980)"\n{core}', f"index = {{ fit_cauchy = 2, near = {near} }}\n{core}")
+    stack = parse_stack(text, "x.toml")
+    asked = contexts(stack, 1500.0, 1550.0)
+    fixed = at_nominal(stack, mean_x(asked))
+    before, after = guide_parts(stack, asked), guide_parts(fixed, asked)
+    for field in ("n", "t_um", "width_um", "etch_um", "sidewall_deg", "wavelength_um"):
+        assert getattr(after.section, field) == pytest.approx(getattr(before.section, field), abs=1e-12)
+    assert after.dn_dwavelength == pytest.approx(before.dn_dwavelength, abs=1e-12)
+    windows = guide_windows(fixed, asked)
+    assert [w.names for w in windows] == [("M38",), ("R20",)]
+    for w in windows:
+        low, high = w.ends()
+        assert (high - low)[:5] == pytest.approx(np.zeros(5), abs=1e-12)
+    (shared,) = guide_windows(at_nominal(stack, mean_x(asked), keep_bias=True), asked)
+    assert shared.width_um == pytest.approx((0.36, 0.51))
+    assert shared.etch_um == pytest.approx((0.15, 0.15))
 
 
 def test_values_in_place_of_nominal_ones() -> None:

@@ -18,7 +18,10 @@ from layerlot.solver.cross_section import GuideFlag
 from tests.fitting.guide_cases import STRIP, rib
 from tests.fitting.stack_cases import GOOD
 
-CHECKS = {c["id"]: c for c in json.loads((Path(__file__).parents[1] / "reference" / "eim.json").read_text())["checks"]}
+REFERENCE = Path(__file__).parents[1] / "reference"
+CHECKS = {
+    c["id"]: c for name in ("eim", "channel") for c in json.loads((REFERENCE / f"{name}.json").read_text())["checks"]
+}
 Capture = pytest.CaptureFixture[str]
 
 
@@ -63,6 +66,24 @@ def test_ribs_of_the_checks(capsys: Capture, name: str, pol: str) -> None:
     assert ("guide_leaks_sideways" in {f["code"] for f in guide["flags"]}) == leaks
     assert (guide["model"], guide["model_u"], guide["model_u_group"]) == ("eim", None, None)
     assert "guide_plain_model" in {f["code"] for f in guide["notes"]}
+
+
+def test_corrected_model(capsys: Capture, folder: Path, monkeypatch: pytest.MonkeyPatch) -> None:
+    """Unless the plain method is asked for, the number is that of the full-vector reference (reference/channel.json)
+    within the error that it states, which is far below the plain method's."""
+    monkeypatch.setenv("LAYERLOT_CACHE", str(folder / "cache"))
+    text = rib((1.444, 3.476, 1.444), 220.0, "full", 500.0)
+    (plain,) = predict(capsys, text, "--wavelength-nm", "1550")
+    assert main(["predict", "wafer.toml", "--json", "--wavelength-nm", "1550"]) == 0
+    (guide,) = json.loads(capsys.readouterr().out, parse_constant=never)["guide"]
+    expected = CHECKS["siwire-36"]["expected"]["quasiTE"]
+    assert guide["model"] == "corrected"
+    assert 0 < guide["model_u"] < 1e-5 and 0 < guide["model_u_group"] < 1e-4
+    # Three stated errors, and the entry's own 1e-6.
+    assert abs(guide["n_eff"] - expected) < 3 * guide["model_u"] + 1e-6
+    assert abs(plain["n_eff"] - expected) > 1e-2
+    assert main(["predict", "wafer.toml", "--wavelength-nm", "1550"]) == 0
+    assert "Guide model: effective index method, corrected to a full-vector" in capsys.readouterr().out
 
 
 AIR = 'index_reference = "air"\nwavelength_reference = "air"\n'
