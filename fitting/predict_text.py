@@ -11,8 +11,8 @@ from .predict_guide import SENSITIVITY, SHIFT, GuidePrediction
 from .stack import Stack, conventions
 
 _MODELS = {
-    "corrected": "Guide model: effective index method, corrected to a full-vector finite-element reference; u model is "
-    "the standard uncertainty that is left.",
+    "corrected": "Guide model: effective index method, corrected to a full-vector finite-element reference; u is "
+    "the standard uncertainty that the model leaves.",
     "eim": "Guide model: plain effective index method, whose error is not known; in silicon wires it may be 0.1 in "
     "n_eff. Not for dimensions.",
 }
@@ -55,7 +55,7 @@ def _guide_text(stack: Stack, guides: Sequence[GuidePrediction]) -> list[str]:
         "width/nm", f"{core} thickness/nm", "etch depth/nm", "sidewall/deg", f"{core} index/0.001", "temperature/°C",
     )  # fmt: skip
     left = ["structure", "wavelength/nm", "mode"]
-    head = [*left, "n_eff", "u model", "n_g", "u model", "spacing/nm"]
+    head = [*left, "n_eff", "u(n_eff)", "n_g", "u(n_g)", "spacing/nm"]
     steps = {key: 1e-3 if key == "core_index" else 1.0 for key in SENSITIVITY}
     changes = [[*_left(g), *_cells(g.sensitivity, SENSITIVITY, "{:.2e}", steps)] for g in guides]
     shifts = [[*_left(g), *_cells(g.shift, SHIFT, "{:.4g}", {})] for g in guides]
