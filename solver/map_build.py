@@ -29,6 +29,8 @@ _LEAST_HELD = 10
 _LEAST_SHARE = 0.7
 # Share of the middle's binding that is taken for a corner which has lost the mode.
 _JUST_BOUND = 0.05
+# Two meshes can agree by chance: no less is stated for what they leave of error in effective and group index.
+_FLOOR = (5e-7, 1e-5)
 
 
 class MapError(RuntimeError):
@@ -98,7 +100,8 @@ def _refined(window: MapWindow, goal: MapGoal, solver: _Solver) -> CorrectionMap
         if met or degree >= goal.degree or following > goal.nodes or not dimension:
             break
         degree += 1
-        data = data.join(solver.data(design_nodes(dimension, degree, following - data.xi.shape[0], data.xi)))
+        more = max(following - data.xi.shape[0], 1)
+        data = data.join(solver.data(design_nodes(dimension, degree, more, data.xi)))
     reference = solver.reference_error()
     error, group = (float(np.hypot(a, b)) for a, b in zip(made.held_error, reference))
     return replace(
@@ -196,21 +199,33 @@ class _Solver:
         return _difference(window, xi[rows], stacked([m for _, m in known]), taken(plain, rows), slopes[rows])
 
     def job(self, section: CrossSection, method: float) -> NodeJob:
-        near = method + 0.7 * self.shortfall if np.isfinite(method) else expected_index(section, self.window.tm, 0)
+        near = (
+            method + 0.7 * self.shortfall
+            if np.isfinite(method)
+            else expected_index(section, self.window.tm, self.window.order)
+        )
         return NodeJob(section, self.window.tm, self.window.order, near)
 
     def reference_error(self) -> tuple[float, float]:
         """What the map's mesh and box leave of error in effective and group index: the change to a finer mesh in a
-        wider box, in the middle of the window and where the mode is bound most weakly; the larger one."""
-        window, worst = self.window, np.zeros(2)
+        wider box, in the middle of the window and where the mode is bound most weakly, if that corner has it; the
+        larger one."""
+        found = [e for e in (self._mesh_error(*place) for place in (self.middle, self.weak)) if e is not None]
+        if not found:
+            raise MapError(0, 2)
+        return max(_FLOOR[0], *(e[0] for e in found)), max(_FLOOR[1], *(e[1] for e in found))
+
+    def _mesh_error(self, section: CrossSection, slopes: Array) -> tuple[float, float] | None:
+        window = self.window
         finer = replace(FINE.finer(1.6), reach=1.5 * FINE.reach)
-        for section, slopes in (self.middle, self.weak):
-            near = float(base_modes(section, window.tm, window.order).N) + self.shortfall
+        near = self.job(section, float(base_modes(section, window.tm, window.order).N)).near
+        try:
             usual = vector_mode(section, window.tm, window.order, near=near, mesh=self.mesh).modes
             better = vector_mode(section, window.tm, window.order, rule=finer).modes
-            groups = [float(m.group_index(section.wavelength_um, slopes)) for m in (usual, better)]
-            worst = np.maximum(worst, [abs(float(usual.N - better.N)), abs(groups[0] - groups[1])])
-        return float(worst[0]), float(worst[1])
+        except NoSuchModeError:
+            return None
+        groups = [float(m.group_index(section.wavelength_um, slopes)) for m in (usual, better)]
+        return abs(float(usual.N - better.N)), abs(groups[0] - groups[1])
 
 
 def _middle(window: MapWindow) -> Array:

@@ -26,7 +26,7 @@ from layerlot.solver.map_window import (
 
 from ..records import Array
 from ..stack import Stack
-from .guide import GuideContext, GuideParts, GuideWindow, core_number, guide_windows
+from .guide import GuideContext, GuideParts, GuideWindow, core_number, guide_windows, mean_x
 from .guide_index import layer_indices, nominal
 
 Progress = Callable[[str, int, int], None]
@@ -58,15 +58,15 @@ def guide_modes(
     out = {f.name: np.array(getattr(_empty(parts), f.name)) for f in fields(GuideModes)}
     for window in guide_windows(stack, contexts):
         rows = list(window.rows)
-        modes = _modes_of(stack, window, _rows(parts.section, rows), parts.radius_um[rows], progress, workers)
+        box = solver_window(stack, window, mean_x(contexts))
+        modes = _modes_of(box, _rows(parts.section, rows), parts.radius_um[rows], progress, workers)
         for name, value in out.items():
             value[rows] = getattr(modes, name)
     return GuideModes(**out)
 
 
 def _modes_of(
-    stack: Stack,
-    window: GuideWindow,
+    window: MapWindow,
     section: CrossSection,
     radius_um: Array,
     progress: Progress | None,
@@ -79,7 +79,7 @@ def _modes_of(
 
     bends = bool(np.isfinite(radius_um).any())
     try:
-        a_map = stored_map(solver_window(stack, window), None, workers, progress, bends)
+        a_map = stored_map(window, None, workers, progress, bends)
     except MapError:
         plain = eim_modes(section, window.tm, window.order, radius_um)
         return replace(plain, flags=plain.flags | int(GuideFlag.NO_MAP))
@@ -87,8 +87,8 @@ def _modes_of(
     return replace(modes, error=np.hypot(modes.error, substrate_pull(section, modes.N)))
 
 
-def solver_window(stack: Stack, window: GuideWindow) -> MapWindow:
-    """The map's window for a window of a stack file."""
+def solver_window(stack: Stack, window: GuideWindow, first_term_at: float | None = None) -> MapWindow:
+    """The map's window for a window of a stack file. first_term_at: as `mean_x` of `layer_indices`."""
     low, high = window.ends()
     for axis, least in _TO_FIRST_ORDER.items():
         if high[axis] - low[axis] <= 2 * least:
@@ -101,7 +101,7 @@ def solver_window(stack: Stack, window: GuideWindow) -> MapWindow:
     return map_window(
         low,
         high,
-        layer_indices(stack, waves).n,
+        layer_indices(stack, waves, mean_x=first_term_at).n,
         [nominal(x.thickness_um) for x in stack.layers[1:-1] if x.thickness_um is not None],
         core_number(stack),
         window.full_etch,
