@@ -3,8 +3,8 @@
     layerlot.solver.map_build.build_map(window)     solves the reference at chosen nodes and fits the difference
     corrected_modes(section, a_map)                 value, all derivatives, stated error
 
-The stated error of a map: the largest miss at held-back nodes and what mesh and box leave in the reference, as standard
-uncertainties added in squares; in a bend the error of the bend's own correction comes on top.
+The stated error of a map: one and a half times the largest miss at held-back nodes and what mesh and box leave in the
+reference, as standard uncertainties added in squares; in a bend the error of the bend's own correction comes on top.
 """
 
 from __future__ import annotations
