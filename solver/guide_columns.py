@@ -16,7 +16,8 @@ import numpy as np
 from .fields import mode_derivatives
 from .layers import flatten
 from .phase import total_phase
-from .scalar_slab import SlabMode, slab_index, slab_mode, slab_phase
+from .scalar_field import SlabMode
+from .scalar_slab import slab_index, slab_mode, slab_phase
 from .slab import mode_index
 
 Value = Any  # float or array (B); bool or array of bool where it is a condition
