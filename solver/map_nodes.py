@@ -7,6 +7,7 @@ start, by one thread.
 from __future__ import annotations
 
 import os
+import signal
 from collections.abc import Callable, Iterator, Sequence
 from concurrent.futures import ProcessPoolExecutor
 from contextlib import contextmanager
@@ -77,9 +78,14 @@ class NodePool:
             return (_solve_one(job, mesh) for job in jobs)
         with _one_thread_each():
             if self._pool is None:
-                self._pool = ProcessPoolExecutor(self.workers, get_context("spawn"))
+                self._pool = ProcessPoolExecutor(self.workers, get_context("spawn"), initializer=_deaf)
             # Processes start as work is handed over, so the environment must hold until then.
             return self._pool.map(partial(_solve_one, mesh=mesh), jobs)
+
+
+def _deaf() -> None:
+    """An interrupt is for the process that hands out the work, which then stops the others."""
+    signal.signal(signal.SIGINT, signal.SIG_IGN)
 
 
 def _solve_one(job: NodeJob, mesh: GuideMesh) -> GuideModes | None:
