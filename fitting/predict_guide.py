@@ -22,7 +22,7 @@ from .observables.guide import (
 )
 from .observables.guide_map import Progress, guide_modes
 from .observables.guide_nominal import at_nominal
-from .observables.guide_response import order_spacing, per_degree, resonance_shift
+from .observables.guide_response import nearest_order, order_spacing, per_degree, resonance_shift
 from .records import Array, Flag
 from .stack import Stack
 
@@ -47,7 +47,8 @@ class GuidePrediction:
     """One mode; indices relative to the stack's index reference, wavelengths as typed. None where there is no number.
 
     model_u, model_u_group: standard uncertainty that the model brings to n_eff and n_g; spacing_nm: of neighbouring
-    resonances or fringes; sensitivity, shift: by the keys above, None where the quantity does not exist (etch depth of
+    resonances or fringes; nearest: number of whole waves on the path, and the wavelength in nm where it holds them;
+    sensitivity, shift: by the keys above, None where the quantity does not exist (etch depth of
     a core etched through) or is not known (temperature, where the core's material states no thermo-optic term);
     films: change of n_eff with index and thickness (nm) of each film; flags: flags and notes.
     """
@@ -62,6 +63,7 @@ class GuidePrediction:
     model_u: float | None
     model_u_group: float | None
     spacing_nm: float | None
+    nearest: tuple[int, float] | None
     sensitivity: Mapping[str, float | None]
     shift: Mapping[str, float | None]
     films: Mapping[str, tuple[float | None, float | None]]
@@ -105,6 +107,10 @@ def _prediction(
     shift_um = resonance_shift(changes * np.array(_SHIFT_STEP), lam_um, group) * typed_share
     length_um = path_um(context.structure)
     spacing_um = np.nan if length_um is None else float(order_spacing(lam_um, group, length_um)) * typed_share
+    nearest = None
+    if length_um is not None and np.isfinite(group):
+        waves, at_um = nearest_order(float(modes.N[k]), lam_um, group, length_um)
+        nearest = waves, at_um * typed_share * 1e3
     corrected = np.isfinite(modes.error[k]) or (np.isnan(modes.N[k]) and not plain)
     films = zip(stack.layers[1:-1], modes.dn[k, 1:-1], modes.dt_per_um[k] / 1000 / reference, strict=True)
     notes = () if corrected else (flag("guide_plain_model"),)
@@ -119,6 +125,7 @@ def _prediction(
         model_u=_known(modes.error[k] / reference),
         model_u_group=_known(modes.group_error[k] / reference),
         spacing_nm=_known(spacing_um * 1e3),
+        nearest=nearest,
         sensitivity=dict(zip(SENSITIVITY, map(_known, changes / reference), strict=True)),
         shift=dict(zip(SHIFT, map(_known, shift_um * 1e6), strict=True)),
         films={film.name: (_known(dn), _known(dt)) for film, dn, dt in films},
@@ -148,7 +155,7 @@ def _none(stack: Stack, context: GuideContext, plain: bool) -> GuidePrediction:
     """What stands for a guide that the models know nothing of."""
     return GuidePrediction(
         context.structure.name, _nm(context), "TM" if context.tm else "TE", context.order, None, None,
-        "eim" if plain else "corrected", None, None, None, dict.fromkeys(SENSITIVITY), dict.fromkeys(SHIFT),
+        "eim" if plain else "corrected", None, None, None, None, dict.fromkeys(SENSITIVITY), dict.fromkeys(SHIFT),
         {layer.name: (None, None) for layer in stack.layers[1:-1]},
         (flag("guide_uniaxial", f"Uniaxial: {', '.join(uniaxial_layers(stack))}."),),
     )  # fmt: skip
@@ -162,12 +169,17 @@ def _known(x: float) -> float | None:
     return float(x) if np.isfinite(x) else None
 
 
+def _whole(nearest: tuple[int, float] | None) -> dict[str, float] | None:
+    return None if nearest is None else {"waves": nearest[0], "wavelength_nm": nearest[1]}
+
+
 def guide_record(p: GuidePrediction) -> dict[str, Any]:
     """A prediction as `predict --json` gives it."""
     return {
         "structure": p.structure, "wavelength_nm": p.wavelength_nm, "pol": p.pol, "order": p.order,
         "n_eff": p.n_eff, "n_g": p.n_g, "model": p.model, "model_u": p.model_u, "model_u_group": p.model_u_group,
-        "spacing_nm": p.spacing_nm, "sensitivity": dict(p.sensitivity), "resonance_shift": dict(p.shift),
+        "spacing_nm": p.spacing_nm, "nearest": _whole(p.nearest), "sensitivity": dict(p.sensitivity),
+        "resonance_shift": dict(p.shift),
         "film_sensitivity": {name: {"index": dn, "thickness_per_nm": dt} for name, (dn, dt) in p.films.items()},
         "flags": [{"code": f.code, "text": f.text} for f in p.flags if f.code in FLAGS],
         "notes": [{"code": f.code, "text": f.text} for f in p.flags if f.code not in FLAGS],

@@ -55,7 +55,7 @@ def _guide_text(stack: Stack, guides: Sequence[GuidePrediction]) -> list[str]:
         "width/nm", f"{core} thickness/nm", "etch depth/nm", "sidewall/deg", f"{core} index/0.001", "temperature/°C",
     )  # fmt: skip
     left = ["structure", "wavelength/nm", "mode"]
-    head = [*left, "n_eff", "u(n_eff)", "n_g", "u(n_g)", "spacing/nm"]
+    head = [*left, "n_eff", "u(n_eff)", "n_g", "u(n_g)", "spacing/nm", "nearest/nm"]
     steps = {key: 1e-3 if key == "core_index" else 1.0 for key in SENSITIVITY}
     changes = [[*_left(g), *_cells(g.sensitivity, SENSITIVITY, "{:.2e}", steps)] for g in guides]
     shifts = [[*_left(g), *_cells(g.shift, SHIFT, "{:.4g}", {})] for g in guides]
@@ -80,7 +80,8 @@ def _left(g: GuidePrediction) -> list[str]:
 
 def _answer(g: GuidePrediction) -> list[str]:
     numbers = ((g.n_eff, ".6f"), (g.model_u, ".1e"), (g.n_g, ".5f"), (g.model_u_group, ".1e"), (g.spacing_nm, ".4f"))
-    return [*_left(g), *("-" if x is None else format(x, digits) for x, digits in numbers)]
+    nearest = "-" if g.nearest is None else f"{g.nearest[1]:.3f} (m = {g.nearest[0]})"
+    return [*_left(g), *("-" if x is None else format(x, digits) for x, digits in numbers), nearest]
 
 
 def _cells(values: Mapping[str, float | None], keys: Sequence[str], form: str, steps: Mapping[str, float]) -> list[str]:
@@ -108,6 +109,9 @@ def _guide_conventions(stack: Stack, guides: Sequence[GuidePrediction]) -> list[
     lines = [_MODELS[model] for model in ("corrected", "eim") if any(g.model == model for g in guides)]
     lines.append("Width is that at half the etch depth: made width = drawn width + width bias.")
     lines.append("spacing: of neighbouring resonances or fringes, wavelength²/(n_g length).")
+    lines.append(
+        "nearest: where the path, or the difference of the arms, holds m whole waves: a resonance or a fringe."
+    )
     without = layer_indices(stack, stack.to_vacuum_um(guides[0].wavelength_nm / 1000)).without_thermo
     line = "temperature: by the materials' thermo-optic terms, without expansion"
     if without:

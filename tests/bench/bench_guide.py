@@ -1,8 +1,8 @@
 """Guides: a correction map built, and the corrected model against one vector solve.
 
-Run by hand: `OMP_NUM_THREADS=1 python tests/bench/bench_guide.py`. The map is that of a silicon strip over width, thickness,
-core index and wavelength. A vector solve is what the nodes of the map cost, derivatives included; it is timed in this process.
-Exits 1 if a target is missed.
+Run by hand: `OMP_NUM_THREADS=1 python tests/bench/bench_guide.py`. The map is that of a silicon strip over width,
+thickness, core index and wavelength. A vector solve is what the nodes of the map cost, derivatives included; it is
+timed in this process. Exits 1 if a target is missed.
 """
 
 from __future__ import annotations

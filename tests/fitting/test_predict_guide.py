@@ -105,6 +105,18 @@ def test_group_index_and_spacing(capsys: Capture, reference: str) -> None:
     assert middle["spacing_nm"] == pytest.approx(2 / (orders[0] - orders[1]), rel=1e-5)
 
 
+@pytest.mark.parametrize("which", [0, 1], ids=["ring", "interferometer"])
+def test_nearest_resonance_or_fringe(capsys: Capture, which: int) -> None:
+    """At the wavelength given as nearest, the path holds that whole number of waves, and no other lies nearer."""
+    first = predict(capsys, STRIP, "--wavelength-nm", "1550")[which]
+    found = first["nearest"]
+    length_nm = (2 * np.pi * 20.0e3, 38.0e3)[which]
+    there = predict(capsys, STRIP, "--wavelength-nm", repr(found["wavelength_nm"]))[which]
+    # Curvature of n_eff over half a spacing: up to 15 nm for the interferometer, where 1e-4 of a wave is left.
+    assert there["n_eff"] * length_nm / found["wavelength_nm"] == pytest.approx(found["waves"], abs=1e-3)
+    assert abs(found["wavelength_nm"] - 1550) < 0.55 * first["spacing_nm"]
+
+
 def test_numbers_relative_to_air(capsys: Capture) -> None:
     """A mode only knows index over wavelength: typed relative to air, the same numbers give the same n_eff as typed in
     vacuum."""
