@@ -29,8 +29,8 @@ def nearest_order(N: float, wavelength: float, group_index: float, length: float
     """Number m of waves on a path that is nearest to the number at a wavelength, and the wavelength where the path
     holds m, all lengths in one unit.
 
-    N(lambda) is taken as straight over the half spacing at the most, so m lambda = N(lambda) L has a closed solution; in
-    silicon wires its curvature (1 per µm² at the most) leaves some pm at a spacing of 10 nm, and less as its square.
+    N(lambda) is taken as straight over half a spacing, so m lambda = N(lambda) L has a closed solution; in silicon
+    wires its curvature (1 per µm² at the most) leaves some pm at a spacing of 10 nm, and less as its square.
     """
     slope = (N - group_index) / wavelength
     order = round(N * length / wavelength)
