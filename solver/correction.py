@@ -9,17 +9,18 @@ reference, as standard uncertainties added in squares; in a bend the error of th
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, fields, replace
 from functools import cached_property
 
 import numpy as np
 from numpy.typing import ArrayLike
 
-from .cross_section import BoolArray, CrossSection, GuideFlag, GuideModes, IntArray
+from .cross_section import BoolArray, CrossSection, GuideFlag, GuideModes, IntArray, without_substrate
 from .layers import Array
 from .map_basis import Halves
 from .map_terms import FILMS, WAVE, along_quantities, base_modes, offsets
 from .map_window import MapWindow
+from .slab import mode_index
 
 # Guides evaluated at once: their polynomials stay in the processor's cache.
 _BLOCK = 256
@@ -91,6 +92,26 @@ def corrected_modes(section: CrossSection, a_map: CorrectionMap, radius_um: Arra
     if not a_map.met:
         flags |= int(GuideFlag.MAP_GOAL_MISSED)
     return _modes(values, flags, error, group_error, shape, window.t_um.size)
+
+
+def held_to_sides(section: CrossSection, modes: GuideModes, tm: bool) -> GuideModes:
+    """Corrected modes (...) compared with what the sides of their guides carry, which the plain method's flags cannot
+    do, its index being higher. At or below the own polarisation's slab mode beside the guide, or the index of a
+    half-space, there is no mode (NaN, flagged); below the other polarisation's slab mode it leaks (flagged)."""
+    n, _ = without_substrate(section.n)
+    column = section.column(1.0)
+    own, other = (mode_index(n, column, section.wavelength_um, 0, pol) for pol in (tm, not tm))
+    floor = np.fmax(np.maximum(n[..., 0], n[..., -1]), own)
+    lost = np.isfinite(modes.N) & ~(floor < modes.N)
+    leaks = (other > modes.N) & ~lost
+    flags = modes.flags | np.where(lost, int(GuideFlag.NO_LATERAL_MODE), 0)
+    flags = flags | np.where(leaks, int(GuideFlag.LEAKS_SIDEWAYS), 0)
+    if not lost.any():
+        return replace(modes, flags=flags)
+    gone = np.where(lost, np.nan, 0.0)
+    values = {f.name: getattr(modes, f.name) for f in fields(GuideModes) if f.name != "flags"}
+    spread = {name: x + (gone[..., None] if x.ndim > gone.ndim else gone) for name, x in values.items()}
+    return GuideModes(**spread, flags=flags)
 
 
 def _change(a_map: CorrectionMap, section: CrossSection) -> tuple[Array, BoolArray, Array]:

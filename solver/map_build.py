@@ -13,7 +13,7 @@ from dataclasses import dataclass, replace
 import numpy as np
 
 from .correction import BendRatio, CorrectionMap
-from .cross_section import CrossSection, GuideModes, without_substrate
+from .cross_section import CrossSection, GuideFlag, GuideModes, without_substrate
 from .layers import Array
 from .map_basis import Halves, basis, design_nodes, exponents, fit, fit_values
 from .map_bend import bend_ratio
@@ -193,7 +193,9 @@ class _Solver:
         plain = base_modes(section, window.tm, window.order)
         jobs = [self.job(single(section, k), float(plain.N[k])) for k in range(xi.shape[0])]
         found = self.pool.solve(jobs, self.mesh)
-        known = [(k, m) for k, m in enumerate(found) if m is not None and np.isfinite(plain.N[k])]
+        # In a closed box a mode that leaks sideways is a mixture with modes of the box: no node to fit to.
+        leaks = int(GuideFlag.LEAKS_SIDEWAYS)
+        known = [(k, m) for k, m in enumerate(found) if m and np.isfinite(plain.N[k]) and not m.flags & leaks]
         self.missing += len(found) - len(known)
         if len(known) < _LEAST_SHARE * len(found):
             raise MapError(len(known), len(found))

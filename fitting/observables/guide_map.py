@@ -72,7 +72,7 @@ def _modes_of(
     progress: Progress | None,
     workers: int | None,
 ) -> GuideModes:
-    from layerlot.solver.correction import corrected_modes
+    from layerlot.solver.correction import corrected_modes, held_to_sides
     from layerlot.solver.map_build import MapError
 
     from .map_store import stored_map
@@ -83,7 +83,7 @@ def _modes_of(
     except MapError:
         plain = eim_modes(section, window.tm, window.order, radius_um)
         return replace(plain, flags=plain.flags | int(GuideFlag.NO_MAP))
-    modes = corrected_modes(section, a_map, radius_um)
+    modes = held_to_sides(section, corrected_modes(section, a_map, radius_um), window.tm)
     return replace(modes, error=np.hypot(modes.error, substrate_pull(section, modes.N)))
 
 

@@ -2,12 +2,16 @@
 
 from __future__ import annotations
 
+from dataclasses import replace
+
 import numpy as np
 import pytest
 from layerlot.fitting.observables.guide import GuideContext, guide_parts, guide_windows
 from layerlot.fitting.observables.guide_map import guide_modes, solver_window
 from layerlot.fitting.stack import Stack, parse_stack
-from layerlot.solver.cross_section import GuideFlag
+from layerlot.solver.correction import held_to_sides
+from layerlot.solver.cross_section import GuideFlag, cross_section
+from layerlot.solver.guide import eim_modes
 from layerlot.solver.map_nodes import single
 from layerlot.solver.map_window import INDEX, SIDEWALL, THICKNESS, WAVELENGTH, WIDTH
 from layerlot.solver.vector_modes import PRECISE, vector_mode
@@ -128,3 +132,37 @@ def test_near_substrate_enters_the_error():
     modes = guide_modes(stack, asked, guide_parts(stack, asked), workers=1)
     assert (modes.error > 1e-4).all()
     assert (modes.flags & GuideFlag.LEAKS_DOWN).all()
+
+
+# An invented silicon rib with 150 of 220 nm left beside the guide: its quasi-TM mode lies below the slab's TE one.
+SHALLOW = (
+    NITRIDE.replace("3000", "2000")
+    .replace('{ material = "silicon nitride (Luke 2015)", shift = { value = 0.0, u = 0.0001 } }', '"silicon (Li 1980)"')
+    .replace("silicon (Salzberg and Villa 1957)", "silicon (Li 1980)")
+    .replace("value = 400, u = 0.1", "value = 220, u = 0.1")
+    .replace('etch_depth_nm = "full"', "etch_depth_nm = 70")
+    .replace("drawn_width_nm = 1000", "drawn_width_nm = 500")
+    .replace("drawn_width_nm = 1010", "drawn_width_nm = 500")
+)
+
+
+@pytest.mark.parametrize("pol", ["TE", "TM"])
+def test_shallow_rib(pol):
+    """The quasi-TE mode of a shallow rib is bound and unflagged; the quasi-TM mode leaks sideways and says so."""
+    stack = stack_of("0", SHALLOW.replace('pol = "TE"', f'pol = "{pol}"'))
+    asked = contexts(stack, 1550.0)[1:]
+    modes = guide_modes(stack, asked, guide_parts(stack, asked), workers=1)
+    leaks = bool(modes.flags[0] & GuideFlag.LEAKS_SIDEWAYS)
+    assert leaks == (pol == "TM")
+    if pol == "TM":
+        assert modes.flags[0] & GuideFlag.NO_MAP
+        assert np.isnan(modes.error).all()
+
+
+def test_a_mode_lost_by_the_correction_is_no_number():
+    """Where the corrected index falls below what the sides carry there is no mode, though the plain method has one."""
+    section = cross_section([[1.444, 1.996, 1.0]], [0.4], 1, [1.0], [1.55])
+    plain = eim_modes(section, False)
+    high, low = (held_to_sides(section, replace(plain, N=np.array([x])), False) for x in (1.5, 1.43))
+    assert high.N[0] == 1.5 and not high.flags[0] & GuideFlag.NO_LATERAL_MODE
+    assert np.isnan(low.N[0]) and np.isnan(low.dn).all() and low.flags[0] & GuideFlag.NO_LATERAL_MODE
