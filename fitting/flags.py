@@ -42,7 +42,7 @@ FLAGS: dict[str, str] = {
     "guide_map_error": "The correction to the reference model stopped short of its goal; the stated uncertainty of the "
     "model says by how much. Narrow the windows in the stack file.",
     "guide_no_map": "Too few guides of the windows in the stack file hold this mode for a correction to the reference "
-    "model: the plain effective index method was used, whose error is not known. Narrow the windows.",
+    "model, so no number is given. Narrow the windows, choose a guide that confines more, or ask for the plain method.",
     "guide_uniaxial": "The guide model knows isotropic layers only, and a layer of this stack has an index_normal: no "
     "number is given. Leave index_normal out to predict the guide.",
 }

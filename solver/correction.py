@@ -82,7 +82,9 @@ def corrected_modes(section: CrossSection, a_map: CorrectionMap, radius_um: Arra
     if np.isfinite(radius).any():
         bent = base_modes(section, window.tm, window.order, radius_um)
         shift = _values(bent, change.shape[1]) - _values(modes, change.shape[1])
-        own = a_map.bend.error if a_map.bend else 1.0
+        # The ratio is that of bends that hold their light: of one that radiates the whole shift is uncertain.
+        radiates = bent.flags.reshape(-1) & int(GuideFlag.BEND_RADIATES)
+        own = np.where(radiates, 1.0, a_map.bend.error if a_map.bend else 1.0)
         lam = section.wavelength_um.reshape(-1)
         error = np.hypot(error, own * np.abs(shift[:, 0]))
         group_error = np.hypot(group_error, own * np.abs(shift[:, 0] - lam * shift[:, 1 + WAVE]))

@@ -42,7 +42,7 @@ class GuideFlag(IntFlag):
     NEAR_CUT_OFF = 256  # the mode is so weakly bound that a small change loses it
     OUTSIDE_MAP = 512  # beyond the window of the correction map, which is carried on straight there
     MAP_GOAL_MISSED = 1024  # the correction map stopped short of its goal; its stated error says by how much
-    NO_MAP = 2048  # the window holds too few guides with the mode for a map: the plain method was used
+    NO_MAP = 2048  # the window holds too few guides with the mode for a map: no number
 
 
 @dataclass(frozen=True, slots=True)

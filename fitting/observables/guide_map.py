@@ -52,10 +52,10 @@ def guide_modes(
     workers: int | None = None,
 ) -> GuideModes:
     """Modes of the guides of contexts (C), `parts` being theirs. plain: by the effective index method alone, which
-    states no error. A window in which no map can be made falls back on that method, flagged."""
+    states no error. In a window of which no map can be made there is no number but a flag."""
     if plain or not contexts:
         return eim_modes(parts.section, parts.tm, parts.order, parts.radius_um)
-    out = {f.name: np.array(getattr(_empty(parts), f.name)) for f in fields(GuideModes)}
+    out = {f.name: np.array(getattr(_none(parts.section), f.name)) for f in fields(GuideModes)}
     for window in guide_windows(stack, contexts):
         rows = list(window.rows)
         box = solver_window(stack, window, mean_x(contexts))
@@ -81,8 +81,8 @@ def _modes_of(
     try:
         a_map = stored_map(window, None, workers, progress, bends)
     except MapError:
-        plain = eim_modes(section, window.tm, window.order, radius_um)
-        return replace(plain, flags=plain.flags | int(GuideFlag.NO_MAP))
+        flags = eim_modes(section, window.tm, window.order, radius_um).flags
+        return replace(_none(section), flags=flags | int(GuideFlag.NO_MAP))
     modes = held_to_sides(section, corrected_modes(section, a_map, radius_um), window.tm)
     return replace(modes, error=np.hypot(modes.error, substrate_pull(section, modes.N)))
 
@@ -132,9 +132,9 @@ def _rows(section: CrossSection, rows: list[int]) -> CrossSection:
     )  # fmt: skip
 
 
-def _empty(parts: GuideParts) -> GuideModes:
-    """Room for the modes of all guides."""
-    shape, layers = parts.section.shape, parts.section.n.shape[-1]
+def _none(section: CrossSection) -> GuideModes:
+    """Modes of guides that hold none."""
+    shape, layers = section.shape, section.n.shape[-1]
     nan = np.full(shape, np.nan)
     return GuideModes(
         nan, nan, np.full((*shape, layers - 2), np.nan), nan, nan, np.full((*shape, layers), np.nan), nan,

@@ -115,14 +115,14 @@ def test_switch_to_the_plain_method():
     assert np.isnan(modes.error).all()
 
 
-def test_window_without_the_mode_falls_back_flagged():
-    """Where the guides of the window hold no such mode the plain method answers, and a flag says so."""
+def test_window_without_the_mode_gives_no_number():
+    """Where the guides of the window hold no such mode there is no number, and a flag says why."""
     text = NITRIDE.replace("value = 400", "value = 90").replace("1000", "300").replace("1010", "300")
     stack = stack_of("0", text)
     asked = [GuideContext(s, 1.55, False, order=1) for s in stack.structures[:1]]
     modes = guide_modes(stack, asked, guide_parts(stack, asked), workers=1)
     assert (modes.flags & GuideFlag.NO_MAP).all()
-    assert np.isnan(modes.error).all()
+    assert np.isnan(modes.N).all() and np.isnan(modes.error).all()
 
 
 def test_near_substrate_enters_the_error():
@@ -156,7 +156,7 @@ def test_shallow_rib(pol):
     assert leaks == (pol == "TM")
     if pol == "TM":
         assert modes.flags[0] & GuideFlag.NO_MAP
-        assert np.isnan(modes.error).all()
+        assert np.isnan(modes.N).all()
 
 
 def test_a_mode_lost_by_the_correction_is_no_number():

@@ -96,6 +96,15 @@ def test_without_a_ratio_the_whole_shift_is_uncertain():
     assert float(bent.error) >= shift
 
 
+def test_of_a_radiating_bend_the_whole_shift_is_uncertain():
+    """In a bend flagged as radiating the ratio is not relied on."""
+    section, a_map = ratio_that_varies()
+    bent = corrected_modes(section, a_map, 1.2)
+    assert bent.flags & GuideFlag.BEND_RADIATES
+    shift = float(eim_modes(section, False, 0, 1.2).N - eim_modes(section, False).N)
+    assert float(bent.error) >= abs(shift)
+
+
 @pytest.mark.nightly
 @pytest.mark.parametrize("name, radii", [("silicon strip", (5.0, 10.0, 20.0)), ("nitride strip", (50.0, 100.0))])
 def test_bend_shift_over_a_window(name, radii):
