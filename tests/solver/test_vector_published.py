@@ -90,24 +90,20 @@ def test_buried_silica():
     assert abs(vector_mode(square, False).N.real - CHECKS["buried-50"]["expected"]["vector_Ex"]) < 3e-7
 
 
-GOELL = [
-    (key, axis, value)
-    for key, values in CHECKS["goell-P2"]["expected"].items()
-    for axis, value in values.items()
-    if not key.endswith("B=0.6")
-]
+GOELL = [(key, axis, value) for key, values in CHECKS["goell-P2"]["expected"].items() for axis, value in values.items()]
 
 
 @pytest.mark.parametrize("key, axis, value", GOELL)
 def test_rectangular_rods(key, axis, value):
-    """Normalised propagation constants of rods in vacuum, both polarisations, to 2e-6."""
+    """Normalised propagation constants of rods in vacuum, both polarisations, to 2e-6; the weakest to the 5e-5 of
+    their entry."""
     index, aspect, frequency = (float(part.split("=")[1]) for part in key.split(","))
     wavelength = 2 / frequency * np.sqrt(index**2 - 1)
     rod = cross_section([1.0, index, 1.0], [1.0], 1, aspect, wavelength)
     # The weaker the mode is bound, the further it reaches; the square's two modes agree only where the box is far.
     rule = PRECISE if frequency < 1.2 else PRECISE.finer(0.75)
     N = vector_mode(rod, axis == "Ey", rule=rule).N.real
-    assert abs((N**2 - 1) / (index**2 - 1) - value) < 2e-6 + PRINTED
+    assert abs((N**2 - 1) / (index**2 - 1) - value) < (5e-5 if frequency == 0.6 else 2e-6 + PRINTED)
 
 
 @pytest.mark.parametrize(
